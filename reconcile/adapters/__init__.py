@@ -1,0 +1,1 @@
+"""One file a technique: from stated readings to evidence, and nothing about the distribution."""
