@@ -48,9 +48,7 @@ def load(path: Path, *, allow_outside: bool = False) -> Case:
     InputError
         With every problem of form found.
     """
-    tables = {
-        name: adapter.columns for name, adapter in ADAPTERS.items() if adapter.columns
-    }
+    tables = {name: adapter.columns for name, adapter in ADAPTERS.items() if adapter.columns}
     return load_case(path, tables, allow_outside=allow_outside)
 
 
@@ -138,9 +136,7 @@ def _targets(system: System) -> tuple[Target, ...]:
         if observable.constants is not None:
             name = system.measurements[i]
             targets.append(
-                Target(
-                    f"Mv, {name}", "Mv", observable.constants.a, system.exponent_of[i], name
-                )
+                Target(f"Mv, {name}", "Mv", observable.constants.a, system.exponent_of[i], name)
             )
     return tuple(targets)
 

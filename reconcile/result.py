@@ -208,9 +208,7 @@ def _family(fit: FamilyFit, targets: Sequence[Target]) -> dict[str, Any]:
     }
 
 
-def estimate_part(
-    result: JointEstimate, targets: Sequence[Target], draws: Draws
-) -> dict[str, Any]:
+def estimate_part(result: JointEstimate, targets: Sequence[Target], draws: Draws) -> dict[str, Any]:
     """Return the ``estimate`` of the document."""
     return {
         "families": {name: _family(fit, targets) for name, fit in result.families.items()},

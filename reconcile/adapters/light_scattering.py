@@ -3,13 +3,14 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
 from reconcile.adapters import scattering_fit as sf
 from reconcile.adapters.common import (
+    SOLIDS_EFFECT,
     Adapter,
     check_columns,
     effect_derivatives,
@@ -40,7 +41,7 @@ if TYPE_CHECKING:
 
     from reconcile.adapters.common import Solutions
     from reconcile.errors import Problem
-    from reconcile.measurement import Measurement, Sample
+    from reconcile.measurement import Measurement, Sample, Table
 
     Array = NDArray[np.float64]
 
@@ -58,6 +59,7 @@ COLUMNS: dict[str, ColumnSpec] = {
 }
 
 _CM_TO_NM = 1e7
+_READINGS = ("R", "R_total", "Kc_R")
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -114,10 +116,10 @@ def prepare(measurement: Measurement, sample: Sample, effects: Mapping[str, Effe
     InputError
         With every problem found.
     """
-    problems = check_columns(measurement, [("R", "R_total", "Kc_R")])
+    problems = check_columns(measurement, [_READINGS])
     raise_problems(problems)
-    fields, table = measurement.fields, measurement.table
-    total = "R_total" in table.columns
+    fields = measurement.fields
+    total = "R_total" in _table(measurement).columns
     solution = solutions(measurement, sample, problems, allow_zero=total)
     lam, n = _optics(measurement, problems)
     same_stock = _same_stock(measurement, effects, problems)
@@ -127,6 +129,7 @@ def prepare(measurement: Measurement, sample: Sample, effects: Mapping[str, Effe
     k = None if increment is None else optical_constant(n, increment, lam, vertical=vertical)
     cells = _cells(measurement, solution, (lam, n, k, vertical), problems)
     raise_problems(problems)
+    assert cells is not None  # noqa: S101 - no problem, so there are cells
     assumptions = list(solution.assumptions)
     correction = 1.0
     if fields.get("dn_dc", {}).get("from") == "same stock" and sample.solids != 1.0:
@@ -196,7 +199,8 @@ def _same_stock(
     elif named is None and len(shared) > 1:
         problems.append(
             measurement.place.problem(
-                "dn_dc", "comes from the same stock, but which effect is the stock's is open",
+                "dn_dc",
+                "comes from the same stock, but which effect is the stock's is open",
                 f'add effect = "…" to dn_dc, one of: {", ".join(shared)}',
             )
         )
@@ -209,7 +213,7 @@ def _increment(
     entry = measurement.fields.get("dn_dc", {})
     value = value_of(entry, "value")
     if value is None:
-        if "Kc_R" not in measurement.table.columns:
+        if "Kc_R" not in _table(measurement).columns:
             problems.append(
                 measurement.place.problem(
                     "dn_dc", "is missing", 'give dn_dc = { value = "… mL/g", from = "…" }'
@@ -238,8 +242,6 @@ def _size_law(measurement: Measurement) -> SizeLaw | None:
 
 
 def _scaled(cells: sf.Cells, factor: float) -> sf.Cells:
-    from dataclasses import replace  # noqa: PLC0415 - only for a same-stock increment
-
     return cells if factor == 1.0 else replace(cells, g=cells.g * factor)
 
 
@@ -248,30 +250,14 @@ def _cells(
     solution: Solutions,
     optics: tuple[float, float, float | None, bool],
     problems: list[Problem],
-) -> sf.Cells:
-    """Return the mean R/K of every flask and angle with its error structure."""
-    table = measurement.table
+) -> sf.Cells | None:
+    """Return the mean R/K of every flask and angle with its error structure; None with problems."""
+    table = _table(measurement)
     lam, n, k, vertical = optics
     angle = table.columns["angle"]
-    key = next(name for name in ("R", "R_total", "Kc_R") if name in table.columns)
+    key = next(name for name in _READINGS if name in table.columns)
     reading = table.columns[key]
-    for row, theta in enumerate(angle):
-        if not 0.0 < theta <= math.pi:
-            problems.append(
-                table.problem(row, "angle", f"found {math.degrees(theta):g}°, expected 0 to 180°")
-            )
-    nominal = solution.c / solution.factor
-    if key == "Kc_R":
-        bad = reading <= 0.0
-        value = nominal / np.where(bad, 1.0, reading)
-    else:
-        bad = reading <= 0.0
-        geometry = 1.0 if vertical else 1.0 + np.cos(angle) ** 2
-        value = reading / geometry / (k or 1.0)
-    for row in np.flatnonzero(bad):
-        problems.append(
-            table.problem(int(row), key, f"found {reading[row]:g}, expected more than 0")
-        )
+    _check_cells(table, key, problems)
     solvent = solution.c == 0.0
     flasks, flask = np.unique(solution.c[~solvent], return_inverse=True)
     angles, which = np.unique(angle, return_inverse=True)
@@ -283,20 +269,44 @@ def _cells(
             )
         )
     if problems:
-        return sf.Cells(*[np.zeros(0)] * 3, *[np.zeros(0, int)] * 2, *[np.zeros(0)] * 2, 0.0, 0)
-    q2 = scattering_vector(n, lam, angles) ** 2
+        return None
+    if key == "Kc_R":
+        value = solution.c / solution.factor / reading
+    else:
+        geometry = 1.0 if vertical else 1.0 + np.cos(angle) ** 2
+        value = reading / geometry / (k or 1.0)
     blank = _Blank.of(value, which, solvent, len(angles))
-    for j in np.unique(which[~solvent]):
-        if blank is not None and blank.count[j] == 0.0:
-            problems.append(
-                measurement.place.problem(
-                    "readings", f"no solvent row (c = 0) at {math.degrees(angles[j]):g}°",
-                    "total Rayleigh ratios need the solvent's at every angle",
-                )
+    if blank is not None or key == "R_total":
+        problems.extend(
+            measurement.place.problem(
+                "readings",
+                f"no solvent row (c = 0) at {math.degrees(angles[j]):g}°",
+                "total Rayleigh ratios need the solvent's at every angle",
             )
-    return _mean_cells(
-        value[~solvent], flasks, flask, (q2, which[~solvent]), blank
-    )
+            for j in np.unique(which[~solvent])
+            if blank is None or blank.count[j] == 0.0
+        )
+    if problems:
+        return None
+    q2 = scattering_vector(n, lam, angles) ** 2
+    return _mean_cells(value[~solvent], flasks, flask, (q2, which[~solvent]), blank)
+
+
+def _table(measurement: Measurement) -> Table:
+    assert measurement.table is not None  # noqa: S101 - check_columns came first
+    return measurement.table
+
+
+def _check_cells(table: Table, key: str, problems: list[Problem]) -> None:
+    angle, reading = table.columns["angle"], table.columns[key]
+    for row in np.flatnonzero((angle <= 0.0) | (angle > math.pi)):
+        found = f"found {math.degrees(angle[row]):g}°, expected more than 0 to 180°"
+        problems.append(table.problem(int(row), "angle", found))
+    for row in np.flatnonzero(reading <= 0.0):
+        found = f"found {reading[row]:g}, expected more than 0"
+        problems.append(
+            table.problem(int(row), key, found, "a reading below the blank cannot be used yet")
+        )
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -369,7 +379,13 @@ def reduce(series: Series) -> Reduction:
         if series.optical_constant is None
         else (
             *series.constants,
-            Constant("K*", series.optical_constant, "mol cm²/g²", "physics of the optics above", "computed"),
+            Constant(
+                "K*",
+                series.optical_constant,
+                "mol cm²/g²",
+                "4π²n²(dn/dc)²/(N_A λ⁴)",
+                "computed",
+            ),
         ),
         series.assumptions,
         tuple(own),
@@ -395,7 +411,7 @@ def _rows(series: Series, fit: sf.SurfaceFit) -> tuple[tuple[Row, ...], Array, A
         found = effect_derivatives(series.effects, series.named, targets)
         for key in series.named:
             # an increment from the same weighing follows the concentration, and turns the sign
-            follows = series.same_stock is not None and key in {series.same_stock, "sample_solids"}
+            follows = series.same_stock is not None and key in {series.same_stock, SOLIDS_EFFECT}
             if follows and series.effects[key].target == "concentration" and name in turned:
                 found[key] = turned[name]
         derivatives[name] = found
@@ -432,7 +448,12 @@ def _quantities(
     for i, row in enumerate(rows):
         power, factor, unit = forms[row.quantity]
         result[row.quantity] = power_quantity(
-            values[i], sd[i], dof[i], power=power, factor=factor, unit=unit,
+            values[i],
+            sd[i],
+            dof[i],
+            power=power,
+            factor=factor,
+            unit=unit,
             u_effects=abs(power) * shared(row),
         )
     return result
@@ -482,8 +503,11 @@ def _plane_quantities(fit: Any, form: str) -> dict[str, QuantityValue]:
     covariance = gradient @ fit.scatter_covariance() @ gradient.T
     sd = np.sqrt(np.diag(covariance))
     dof = float(fit.dof)
-    forms = (("Mw", inverse, -1.0, 1.0, "g/mol"), ("A2", a2, 1.0, 1.0, "mol mL/g²"),
-             ("Rg", radius2, 0.5, 1e7, "nm"))
+    forms = (
+        ("Mw", inverse, -1.0, 1.0, "g/mol"),
+        ("A2", a2, 1.0, 1.0, "mol mL/g²"),
+        ("Rg", radius2, 0.5, 1e7, "nm"),
+    )
     result = {}
     for i, (name, value, exponent, factor, unit) in enumerate(forms):
         if fit.dof == 0 or root <= 0.0:
@@ -508,49 +532,66 @@ def _findings(
         found.append(Finding(code, severity, text, remedy, series.name))
 
     if series.u_reading is None:
-        add("no-stated-error", "note",
+        add(
+            "no-stated-error",
+            "note",
             "no reading error was stated: the scatter of the readings sets the scale",
-            "state u_reading, from repeated readings of one solution")
+            "state u_reading, from repeated readings of one solution",
+        )
     elif fit.scatter.p_value < 0.01:
-        add("scatter-exceeds-stated", "warning",
+        add(
+            "scatter-exceeds-stated",
+            "warning",
             f"readings scatter {math.sqrt(fit.scatter.ratio):.2g} times as much as stated"
             f" (p = {fit.scatter.p_value:.1g})",
-            "look for dust, a bad cell or a wrong u_reading")
+            "look for dust, a bad cell or a wrong u_reading",
+        )
     by_form = {a.form: a.quantities["Mw"] for a in alternatives}
     zimm, berry = by_form["Zimm plane, equal weights"], by_form["Berry plane, equal weights"]
     if zimm.value and berry.value and zimm.u and berry.u:
         gap = abs(math.log(zimm.value / berry.value))
         if gap > 2.0 * math.hypot(zimm.u / zimm.value, berry.u / berry.value):
-            add("forms-differ", "warning",
+            add(
+                "forms-differ",
+                "warning",
                 f"Zimm and Berry planes differ by {100 * gap:.2g} % in Mw, more than their errors",
-                "measure lower concentrations and smaller angles; see the alternatives")
+                "measure lower concentrations and smaller angles; see the alternatives",
+            )
     _range_findings(series, quantities, add)
     return found
 
 
-def _range_findings(
-    series: Series, quantities: Mapping[str, QuantityValue], add: Any
-) -> None:
+def _range_findings(series: Series, quantities: Mapping[str, QuantityValue], add: Any) -> None:
     cells, radius, mass = series.cells, quantities["Rg"], quantities["Mw"]
     a2 = quantities["A2"].value
     if radius.value is not None:
         reach = radius.value / _CM_TO_NM * math.sqrt(float(cells.q2.max()))
         if reach > 1.3:
-            add("q-range-wide", "caution",
+            add(
+                "q-range-wide",
+                "caution",
                 f"q·Rg reaches {reach:.2g}: a straight line in q² biases Mw and Rg by per cents"
                 " unless the dispersity is near 2",
-                "compare the forms; use angles with q·Rg under 1.3")
+                "compare the forms; use angles with q·Rg under 1.3",
+            )
         limit = series.lam / series.n / 20.0 * _CM_TO_NM
         if radius.value < limit:
-            add("radius-below-limit", "note",
+            add(
+                "radius-below-limit",
+                "note",
                 f"Rg of {radius.value:.2g} nm is below λ/20 = {limit:.2g} nm in the medium: read it"
-                " as a limit", "shorter wavelength, or no statement on Rg")
+                " as a limit",
+                "shorter wavelength, or no statement on Rg",
+            )
     if mass.value is not None and a2 is not None:
         top = a2 * mass.value * float(cells.c.max())
         if top > 1.0:
-            add("concentrations-too-high", "warning",
+            add(
+                "concentrations-too-high",
+                "warning",
                 f"A2·Mw·c reaches {top:.2g}; higher virial terms than the third matter beyond 1",
-                "measure lower concentrations")
+                "measure lower concentrations",
+            )
 
 
 def _readings(series: Series, fit: sf.SurfaceFit) -> dict[str, tuple[float, ...]]:

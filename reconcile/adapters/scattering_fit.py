@@ -162,7 +162,8 @@ def fit_surface(cells: Cells, u_reading: float | None, u_flask: float) -> Surfac
     -----
     The scale of the single readings comes from residuals with every flask's and every angle's mean
     removed, which the shared errors cannot touch; a stated error is its prior with ν₀ = 3.
-    Shared errors: half-normal priors on a 6 × 6 grid of equal probability. A flask's concentration
+    Shared errors: half-normal priors on a 6 × 6 grid of equal probability, of scale 2 %, or as
+    large as a stated flask error, which is then known to be there besides. A flask's concentration
     error acts through the model, as ∂ ln g/∂ ln c = 1 − ∂ ln m/∂ ln c.
     """
     start = plane(cells, "zimm").coefficients
@@ -170,18 +171,18 @@ def fit_surface(cells: Cells, u_reading: float | None, u_flask: float) -> Surfac
     if parameters[0] <= 0.0:
         # a noisy line through zero: start from the lowest reading instead
         parameters[0] = float(np.min(cells.c / cells.g))
-    nodes = SHARED_ERROR_PRIOR * ndtri(
-        0.5 + 0.5 * (np.arange(_SHARED_NODES) + 0.5) / _SHARED_NODES
-    )
-    tau = np.stack(np.meshgrid(nodes, nodes, indexing="ij"), axis=-1).reshape(-1, 2)
-    result = None
+    nodes = ndtri(0.5 + 0.5 * (np.arange(_SHARED_NODES) + 0.5) / _SHARED_NODES)
+    per_flask = u_flask if u_flask > 0.0 else SHARED_ERROR_PRIOR
+    tau = np.stack(
+        np.meshgrid(per_flask * nodes, SHARED_ERROR_PRIOR * nodes, indexing="ij"), axis=-1
+    ).reshape(-1, 2)
+    unit = 1.0 if u_reading is None else u_reading
+    mean = parameters
     for _ in range(_PASSES):
-        scatter = _reading_scatter(cells, parameters, u_reading)
-        unit = 1.0 if u_reading is None else u_reading
-        sigma = unit * np.sqrt(scatter.scale2)
-        result = _averaged(cells, parameters, tau, sigma, u_flask)
-        parameters = result[0]
-    mean, covariance, dof, weight = result
+        # the weights follow the fitted readings, the fit follows the weights
+        scatter = _reading_scatter(cells, mean, u_reading)
+        sigma = unit * float(np.sqrt(scatter.scale2))
+        mean, covariance, dof, weight = _averaged(cells, mean, tau, sigma, u_flask)
     shared = weight @ tau
     shrink = np.sqrt((dof - 2.0) / dof)
     return SurfaceFit(
@@ -197,7 +198,10 @@ def fit_surface(cells: Cells, u_reading: float | None, u_flask: float) -> Surfac
 def _reading_scatter(cells: Cells, parameters: Array, u_reading: float | None) -> Scatter:
     expected = cells.c / surface(parameters, cells.c, cells.q2)
     residual = cells.g / expected - 1.0
-    columns = [np.eye(cells.flask.max() + 1)[cells.flask], np.eye(cells.angle.max() + 1)[cells.angle]]
+    columns = [
+        np.eye(cells.flask.max() + 1)[cells.flask],
+        np.eye(cells.angle.max() + 1)[cells.angle],
+    ]
     design = np.concatenate(columns, axis=1) / cells.spread[:, None]
     target = residual / cells.spread
     solution, _, rank, _ = np.linalg.lstsq(design, target, rcond=None)
@@ -221,9 +225,7 @@ def _averaged(
         + u_flask**2 * same_flask * np.outer(lever, lever)
     )
     covariance = (
-        known
-        + tau[:, 0, None, None] ** 2 * same_flask
-        + tau[:, 1, None, None] ** 2 * same_angle
+        known + tau[:, 0, None, None] ** 2 * same_flask + tau[:, 1, None, None] ** 2 * same_angle
     )
     weight_matrix = np.linalg.inv(covariance)
     _, ln_det = np.linalg.slogdet(covariance)

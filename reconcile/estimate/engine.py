@@ -153,7 +153,7 @@ def solve(system: System, family: Family, t: Array) -> NodeSolution:
     for step_number in range(_MAX_STEPS):
         exact = step_number >= _GAUSS_NEWTON_STEPS
         gradient, hessian = _positive(system, data, z, predicted, exact=exact)
-        step = -np.linalg.solve(hessian, gradient[:, :, None])[:, :, 0]
+        step = np.asarray(-np.linalg.solve(hessian, gradient[:, :, None])[:, :, 0], float)
         decrement = -np.einsum("tk,tk->t", gradient, step)
         if exact and (decrement < _CONVERGED * np.maximum(1.0, q)).all():
             break
@@ -185,7 +185,7 @@ def _accept(
     data: NodeData,
     state: tuple[Array, Predicted, Array, Array],
 ) -> tuple[Array, Predicted, Array]:
-    z, predicted, q, step = state
+    z, _, q, step = state
     length = np.ones(len(t))
     for _ in range(12):
         trial = z + length[:, None] * step

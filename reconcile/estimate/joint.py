@@ -101,8 +101,8 @@ class FamilyFit:
 class JointEstimate:
     """Everything the joint estimate knows.
 
-    ``fine_t`` and ``deviance`` hold −2 ln L̄(Đ)/L̄max on the common grid. ``ln_likelihood_ratio_uniform``
-    is ln L̄(Đ → 1)/L̄max.
+    ``fine_t`` and ``deviance`` hold −2 ln L̄(Đ)/L̄max on the common grid;
+    ``ln_likelihood_ratio_uniform`` is ln L̄(Đ → 1)/L̄max.
     """
 
     system: System
@@ -127,7 +127,8 @@ class _Grid:
     family: Family
     nodes: NodeSolution
     ln_likelihood: Array
-    q: Array
+    t_peak: float
+    chi2: float
 
 
 def estimate(
@@ -155,9 +156,19 @@ def estimate(
     grids = {}
     for name, family in FAMILIES.items():
         solution = solve(system, family, nodes)
-        spline = CubicSpline(nodes, np.column_stack([solution.ln_likelihood, solution.q]))(fine)
-        grids[name] = _Grid(family, solution, spline[:, 0], spline[:, 1])
+        spline = CubicSpline(nodes, solution.ln_likelihood)
+        chi2 = -_highest(CubicSpline(nodes, -solution.q))[1]
+        grids[name] = _Grid(family, solution, spline(fine), _highest(spline)[0], max(chi2, 0.0))
     return _assemble(system, targets, fine, grids, expected=expected)
+
+
+def _highest(spline: CubicSpline) -> tuple[float, float]:
+    """Return where a spline is highest within its nodes, and how high."""
+    inside = spline.derivative().roots(extrapolate=False)
+    places = np.concatenate([spline.x[[0, -1]], inside[np.isfinite(inside)]])
+    heights = spline(places)
+    best = int(np.argmax(heights))
+    return float(places[best]), float(heights[best])
 
 
 def _refined_nodes(coarse: Array, scans: dict[str, NodeSolution]) -> Array:
@@ -180,7 +191,7 @@ def _assemble(
     weights = _family_weights(fine, grids)
     families = {}
     for name, grid in grids.items():
-        mode = _mode(system, grid, fine)
+        mode = _mode(system, grid)
         rates = _dof_of(mode, targets)
         families[name] = FamilyFit(
             name,
@@ -189,7 +200,7 @@ def _assemble(
             {t.name: _profile(t, [grid], fine, rates[t.name], system) for t in targets},
             mode.t,
             mode.z,
-            float(max(grid.q.min(), 0.0)),
+            grid.chi2,
             mode,
         )
     # the headline uses the smaller ν of the two families: the wider cut
@@ -225,8 +236,8 @@ def _family_weights(fine: Array, grids: dict[str, _Grid]) -> dict[str, float]:
     return {name: value / total if total > 0.0 else 0.5 for name, value in mass.items()}
 
 
-def _mode(system: System, grid: _Grid, fine: Array) -> Linearised:
-    t = fine[[int(np.argmax(grid.ln_likelihood))]]
+def _mode(system: System, grid: _Grid) -> Linearised:
+    t = np.array([grid.t_peak])
     solution = solve(system, grid.family, t)
     return linearise(system, grid.family, float(t[0]), solution.z[0])
 
@@ -264,11 +275,10 @@ def _dispersity_statement(fine: Array, ln_likelihood: Array, dof: float) -> Stat
     for key, level in LEVELS.items():
         low, high = likelihood_interval(fine, deviance, cut(level, dof))
         ends[key] = (_to_dispersity(low), _to_dispersity(high))
-    peak = fine[int(np.argmax(ln_likelihood))]
-    # the grid starts at Đ = 1.0001, which stands for a uniform polymer
-    value = 1.0 if peak <= T_MIN else 1.0 + float(np.exp(peak))
-    if peak >= T_MAX:
-        value = None
+    peak, _ = _highest(CubicSpline(fine, ln_likelihood))
+    # the grid starts at Đ = 1.0001, which stands for a uniform polymer, and ends where nothing is
+    # known any more
+    value = None if peak >= T_MAX else 1.0 + float(np.exp(peak)) * (peak > T_MIN)
     reading = reading_of(*ends["interval95"])
     return Statement(
         None if reading == "undetermined" else value,
@@ -297,8 +307,12 @@ def _profile(
     parts = [_conditional(target, grid, t, system) for grid in grids]
     top = max(float(part[2].max()) for part in parts)
     alive = [part[2] > top - _DEPTH for part in parts]
-    low = min(float((p[0] - 6.0 * p[1])[a].min()) for p, a in zip(parts, alive, strict=True) if a.any())
-    high = max(float((p[0] + 6.0 * p[1])[a].max()) for p, a in zip(parts, alive, strict=True) if a.any())
+    low = min(
+        float((p[0] - 6.0 * p[1])[a].min()) for p, a in zip(parts, alive, strict=True) if a.any()
+    )
+    high = max(
+        float((p[0] + 6.0 * p[1])[a].max()) for p, a in zip(parts, alive, strict=True) if a.any()
+    )
     x = np.linspace(low, high, _PROFILE_X)
     joint = np.full((len(x), len(t)), -np.inf)
     for centre, sd, ln_l in parts:
@@ -355,5 +369,3 @@ def _with_expected_limit(result: JointEstimate) -> JointEstimate:
     end = 1 if result.dispersity.reading == "upper limit" else 0
     limit = again.dispersity.interval95[end]
     return replace(result, dispersity=replace(result.dispersity, expected_limit95=limit))
-
-

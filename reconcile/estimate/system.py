@@ -145,7 +145,9 @@ def build_system(evidence: Sequence[Evidence], effects: Mapping[str, Effect]) ->
     EstimateError
         If no row observes the distribution.
     """
-    blocks, rows, measurements = [], [], []
+    blocks: list[tuple[Evidence, tuple[int, ...]]] = []
+    rows: list[Row] = []
+    measurements: list[str] = []
     for block in evidence:
         linked = tuple(i for i, row in enumerate(block.rows) if row.observable is not None)
         if linked:
@@ -155,7 +157,7 @@ def build_system(evidence: Sequence[Evidence], effects: Mapping[str, Effect]) ->
     if not rows:
         raise EstimateError(
             "no measurement observes the molar-mass distribution\n"
-            "  give osmometry, light scattering, [η] with Mark-Houwink constants, or stated averages"
+            "  give Mn, Mw, or [η] with Mark-Houwink constants, measured or stated"
         )
     observables = tuple(row.observable for row in rows if row.observable is not None)
     acting = sorted({key for row in rows for key in row.derivatives if effects[key].u > 0.0})

@@ -1,4 +1,4 @@
-"""The global test: do the measurements tell one story?
+"""The global test of whether the measurements tell one story.
 
 χ² of the joint fit against its degrees of freedom, with Student's correction where scatter of few
 readings sets a scale. The fault library is not part of this test: no culprit is named here.
@@ -57,17 +57,13 @@ def assess(result: JointEstimate, free: FamilyFree) -> Consistency:
     pulls = fit.linearised.pulls()
     residuals = tuple(
         Residual(name, row.quantity, None if math.isnan(z) else float(z))
-        for name, row, z in zip(
-            result.system.measurements, result.system.rows, pulls, strict=True
-        )
+        for name, row, z in zip(result.system.measurements, result.system.rows, pulls, strict=True)
     )
     p_value = None
     if dof > 0:
         nu = fit.linearised.residual_dof()
-        heavy = math.isfinite(nu) and nu < 1e6  # noqa: PLR2004
-        p_value = float(
-            fdtrc(dof, nu, fit.chi2 / dof) if heavy else chdtrc(dof, fit.chi2)
-        )
+        heavy = math.isfinite(nu) and nu < 1e6
+        p_value = float(fdtrc(dof, nu, fit.chi2 / dof) if heavy else chdtrc(dof, fit.chi2))
     verdict = _verdict(p_value, free)
     return Consistency(
         verdict, fit.chi2, max(dof, 0), p_value, residuals, _statement(verdict, p_value, free)
@@ -91,9 +87,7 @@ def _statement(verdict: str, p_value: float | None, free: FamilyFree) -> str:
             f" (p = {free.p_value:.1g}); which measurement is wrong is not named yet."
         )
     if p_value is None:
-        return (
-            "There are no more measurements than unknowns: whether they agree cannot be tested."
-        )
+        return "There are no more measurements than unknowns: whether they agree cannot be tested."
     p = f"{p_value:.1g}" if p_value < 0.1 else f"{p_value:.2f}"
     if verdict == "consistent":
         return f"The measurements tell one story (p = {p})."

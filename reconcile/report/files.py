@@ -108,8 +108,19 @@ def _csv(rows: list[list[Any]]) -> str:
 
 def _quantities_csv(document: Mapping[str, Any]) -> str:
     rows: list[list[Any]] = [
-        ["measurement", "technique", "form", "quantity", "unit", "value", "standard uncertainty",
-         "with shared effects", "95 % low", "95 % high", "reading"]
+        [
+            "measurement",
+            "technique",
+            "form",
+            "quantity",
+            "unit",
+            "value",
+            "standard uncertainty",
+            "with shared effects",
+            "95 % low",
+            "95 % high",
+            "reading",
+        ]
     ]
     for entry in document["measurements"]:
         forms = [(entry["form"], entry["quantities"])]
@@ -117,8 +128,18 @@ def _quantities_csv(document: Mapping[str, Any]) -> str:
         for form, quantities in forms:
             for name, q in quantities.items():
                 rows.append(
-                    [entry["name"], entry["technique"], form, name, q["unit"], q["value"], q["u"],
-                     q["u_with_effects"], *q["interval95"], q["reading"]]
+                    [
+                        entry["name"],
+                        entry["technique"],
+                        form,
+                        name,
+                        q["unit"],
+                        q["value"],
+                        q["u"],
+                        q["u_with_effects"],
+                        *q["interval95"],
+                        q["reading"],
+                    ]
                 )
     return _csv(rows)
 

@@ -81,7 +81,9 @@ def interval_text(low: float | None, high: float | None) -> str:
     if low is None or high is None:
         end = low if high is None else high
         sign = "≥" if high is None else "≤"
-        return f"{sign} {rounded(end, 2 - math.floor(math.log10(abs(end))))}" if end else f"{sign} 0"
+        return (
+            f"{sign} {rounded(end, 2 - math.floor(math.log10(abs(end))))}" if end else f"{sign} 0"
+        )
     half = (high - low) / 2.0
     if half <= 0.0:
         return value_text(low)

@@ -24,10 +24,36 @@ _NO_UNCERTAINTY = "no uncertainty"
 
 _ASCII = str.maketrans(
     {
-        "±": "+/-", "²": "2", "³": "3", "·": ".", "→": "->", "–": "-", "—": "-", "≤": "<=",
-        "≥": ">=", "Đ": "D", "η": "eta", "χ": "chi", "°": "deg ", "µ": "u", "θ": "theta",
-        "λ": "lambda", "π": "pi", "ν": "nu", "₀": "0", "₂": "2", "₃": "3", "κ": "kappa",
-        "×": "x", "−": "-", "’": "'", "…": "...", "√": "sqrt ", "∂": "d", "ρ": "rho", "σ": "sigma",
+        "±": "+/-",
+        "²": "2",
+        "³": "3",
+        "·": ".",
+        "→": "->",
+        "–": "-",
+        "—": "-",
+        "≤": "<=",
+        "≥": ">=",
+        "Đ": "D",
+        "η": "eta",
+        "χ": "chi",
+        "°": "deg ",
+        "µ": "u",
+        "θ": "theta",
+        "λ": "lambda",
+        "π": "pi",
+        "ν": "nu",
+        "₀": "0",
+        "₂": "2",
+        "₃": "3",
+        "κ": "kappa",
+        "×": "x",
+        "−": "-",
+        "’": "'",
+        "…": "...",
+        "√": "sqrt ",
+        "∂": "d",
+        "ρ": "rho",
+        "σ": "sigma",
     }
 )
 
@@ -118,19 +144,20 @@ def _head(page: _Page, document: Mapping[str, Any]) -> None:
 def _answer(page: _Page, document: Mapping[str, Any]) -> None:
     page.heading("Answer")
     estimate = document["estimate"]
-    rows = []
-    for name in ("dispersity", "Mn", "Mw", "Mz"):
-        rows.append(_answer_row(_NAMES.get(name, name), estimate["averages"][name]))
-    for entry in estimate["viscosity_averages"]:
-        rows.append(_answer_row(f"Mv (a = {entry['exponent']:g}, {entry['measurement']})", entry))
+    rows = [
+        _answer_row(_NAMES.get(name, name), estimate["averages"][name])
+        for name in ("dispersity", "Mn", "Mw", "Mz")
+    ]
+    rows += [
+        _answer_row(f"Mv (a = {entry['exponent']:g}, {entry['measurement']})", entry)
+        for entry in estimate["viscosity_averages"]
+    ]
     _compact(page, rows)
     limit = estimate["averages"]["dispersity"]["expected_limit95"]
     if limit is not None:
         reading = estimate["averages"]["dispersity"]["reading"]
         sign = "≤" if reading == "upper limit" else "≥"
-        page.line(
-            f"Readings in perfect agreement would have given Đ {sign} {limit:.3g} (95 %).", 2
-        )
+        page.line(f"Readings in perfect agreement would have given Đ {sign} {limit:.3g} (95 %).", 2)
     page.line()
     consistency = document["consistency"]
     page.line(f"Verdict: {consistency['verdict']}. {consistency['statement']}", 2, 2)
@@ -158,7 +185,8 @@ def _answer_row(label: str, entry: Mapping[str, Any]) -> tuple[str, str, str]:
     interval = f"{interval_text(low, high)} {unit}".strip()
     if entry["reading"] != "interval":
         return label, interval, "(95 %)"
-    half = (high - low) / 3.92
+    # a closed interval has both ends; its half width over 1.96 sets the digits of the value
+    half = (high - low) / 3.92 if low is not None and high is not None else None
     value = value_text(entry["value"] * factor, half).split(" ±")[0].strip("(")
     return label, f"{value} {unit}".strip(), f"95 %: {interval}"
 
@@ -171,8 +199,10 @@ def _limit_sentence(entry: Mapping[str, Any]) -> str:
         None if low is None else low * factor, None if high is None else high * factor
     )
     probability = entry["probability_met"]
-    shown = f"{probability:.2f}" if 0.005 < probability < 0.995 else (
-        "> 0.99" if probability >= 0.995 else "< 0.01"
+    shown = (
+        f"{probability:.2f}"
+        if 0.005 < probability < 0.995
+        else ("> 0.99" if probability >= 0.995 else "< 0.01")
     )
     name = _NAMES.get(entry["quantity"], entry["quantity"])
     return (
@@ -262,7 +292,9 @@ def _quantity_row(name: str, entry: Mapping[str, Any]) -> tuple[str, str, str]:
     with_effects = ""
     if total is not None and total > 1.005 * entry["u"]:
         both = value_text(value, total * factor)
-        with_effects = f"  [± {both.split('± ')[1].rstrip(')')}]" if "e" not in both else f"  [{both}]"
+        with_effects = (
+            f"  [± {both.split('± ')[1].rstrip(')')}]" if "e" not in both else f"  [{both}]"
+        )
     return label, shown + with_effects, f"95 %: {interval_text(low, high)}"
 
 
@@ -305,7 +337,9 @@ def _beneath(page: _Page, document: Mapping[str, Any], *, verbose: bool) -> None
     if verbose:
         page.line("Share of the variance of ln Đ:", 2)
         ranked = sorted(estimate["budget"], key=lambda e: -e["share"])
-        page.table([(f"{100 * e['share']:5.1f} %", f"{e['source']} ({e['kind']})") for e in ranked], 4)
+        page.table(
+            [(f"{100 * e['share']:5.1f} %", f"{e['source']} ({e['kind']})") for e in ranked], 4
+        )
     check = estimate["self_check"]
     page.line(
         f"Numerical self-check {'passed' if check['passed'] else 'FAILED'}"
