@@ -1,0 +1,135 @@
+"""The schemas of the documents: finding them, and turning their errors into plain sentences."""
+
+from __future__ import annotations
+
+import json
+from dataclasses import dataclass
+from difflib import get_close_matches
+from functools import cache
+from importlib.resources import files
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+if TYPE_CHECKING:
+    from collections.abc import Iterator
+
+    from jsonschema.exceptions import ValidationError
+
+__all__ = ["SchemaFault", "load_schema", "schema_text", "validate"]
+
+
+@dataclass(frozen=True, slots=True)
+class SchemaFault:
+    """One place where a document breaks its schema."""
+
+    path: tuple[str | int, ...]
+    text: str
+    remedy: str = ""
+
+    @property
+    def place(self) -> str:
+        """The path as people read it: ``osmometry[0].u_reading``."""
+        return path_text(self.path)
+
+
+def path_text(path: tuple[str | int, ...]) -> str:
+    """Return a key path as people read it.
+
+    Examples
+    --------
+    >>> path_text(("osmometry", 0, "u_reading"))
+    'osmometry[0].u_reading'
+    """
+    text = ""
+    for part in path:
+        text += f"[{part}]" if isinstance(part, int) else f".{part}" if text else str(part)
+    return text
+
+
+def schema_text(name: str) -> str:
+    """Return a schema's text, from the installed package or from the checkout beside it."""
+    packed = files("reconcile") / "schemas" / f"{name}.schema.json"
+    if packed.is_file():
+        return packed.read_text("utf-8")
+    checkout = Path(__file__).resolve().parent.parent / "schemas"
+    return (checkout / f"{name}.schema.json").read_text("utf-8")
+
+
+@cache
+def load_schema(name: str) -> dict[str, Any]:
+    """Return a schema by name and version, such as ``case-1``."""
+    schema: dict[str, Any] = json.loads(schema_text(name))
+    return schema
+
+
+def validate(document: Any, name: str) -> Iterator[SchemaFault]:
+    """Yield every place where a document breaks its schema, as plain sentences."""
+    from jsonschema import Draft202012Validator  # noqa: PLC0415 - slow to import
+
+    for error in Draft202012Validator(load_schema(name)).iter_errors(document):
+        yield from _explain(error)
+
+
+def _explain(error: ValidationError) -> Iterator[SchemaFault]:
+    path = tuple(error.absolute_path)
+    rule = str(error.validator)
+    if rule == "additionalProperties":
+        yield from _unknown(error, path)
+    elif rule == "required":
+        missing = [key for key in error.validator_value if key not in error.instance]
+        # jsonschema raises one error per missing key, each naming it first
+        key = next(k for k in missing if error.message.startswith(repr(k)))
+        yield SchemaFault(path, f"{key!r} is missing", _hint(error.schema, key))
+    else:
+        yield SchemaFault(path, _sentence(error, rule))
+
+
+def _unknown(error: ValidationError, path: tuple[str | int, ...]) -> Iterator[SchemaFault]:
+    known = list(error.schema.get("properties", {}))
+    patterns = error.schema.get("patternProperties", {})
+    for key in error.instance:
+        if key in known:
+            continue
+        near = get_close_matches(key, known, 1, 0.6)
+        remedy = f"did you mean {near[0]!r}?" if near else f"known: {', '.join(sorted(known)[:12])}"
+        if patterns:
+            remedy = "use lower-case letters, digits and underscores, a letter first"
+        yield SchemaFault((*path, key), "unknown key", remedy)
+
+
+def _hint(schema: dict[str, Any], key: str) -> str:
+    entry = schema.get("properties", {}).get(key, {})
+    examples = entry.get("examples")
+    return f"for example: {key} = {json.dumps(examples[0], ensure_ascii=False)}" if examples else ""
+
+
+_TYPES = {
+    "string": "a text in quotes", "number": "a number", "integer": "a whole number",
+    "array": "a list", "object": "a table", "boolean": "true or false", "null": "nothing",
+}  # fmt: skip
+
+
+def _sentence(error: ValidationError, rule: str) -> str:
+    found = json.dumps(error.instance, ensure_ascii=False, default=str)
+    found = found if len(found) <= 60 else found[:57] + "…"
+    value = error.validator_value
+    if rule == "type":
+        kinds = [value] if isinstance(value, str) else list(value)
+        return f"found {found}, expected {' or '.join(_TYPES[k] for k in kinds)}"
+    if rule == "enum":
+        near = get_close_matches(str(error.instance), [str(v) for v in value], 1, 0.6)
+        hint = f"; did you mean {near[0]!r}?" if near else ""
+        return f"found {found}, expected one of {', '.join(map(str, value))}{hint}"
+    texts = {
+        "const": f"found {found}, expected {value!r}",
+        "minimum": f"found {found}, expected {value} or more",
+        "exclusiveMinimum": f"found {found}, expected more than {value}",
+        "maximum": f"found {found}, expected {value} or less",
+        "minLength": f"found {found}, expected a text",
+        "minItems": f"found {found}, expected at least {value} entries",
+        "maxItems": f"found {found}, expected at most {value} entries",
+        "uniqueItems": f"found {found}, expected each entry once",
+        "pattern": f"found {found}, expected {error.schema.get('x-expected', value)}",
+        "minProperties": "is empty",
+    }
+    return texts.get(rule, f"found {found}, which breaks the rule {rule!r}")
