@@ -13,6 +13,7 @@ from scipy.special import stdtrit
 from reconcile.errors import InputError, Problem
 from reconcile.evidence import Finding, QuantityValue
 from reconcile.measurement import Effect, Quantity
+from reconcile.observables import SizeLaw
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Iterable, Mapping, Sequence
@@ -38,6 +39,7 @@ __all__ = [
     "medium_of",
     "power_quantity",
     "raise_problems",
+    "size_law_of",
     "slug",
     "solutions",
     "value_of",
@@ -155,6 +157,20 @@ def value_of(fields: Mapping[str, Any], key: str) -> float | None:
     if entry is None:
         return None
     return entry.value if isinstance(entry, Quantity) else float(entry)
+
+
+def size_law_of(fields: Mapping[str, Any]) -> SizeLaw | None:
+    """Return the stated law Rg = K M^nu; None where there is none."""
+    entry = fields.get("size_law")
+    if entry is None:
+        return None
+    return SizeLaw(
+        entry["K"].value,
+        float(entry["nu"]),
+        value_of(entry, "u_K") or 0.0,
+        value_of(entry, "M_ref") or 1e5,
+        str(entry.get("source", "")),
+    )
 
 
 def medium_of(measurement: Measurement) -> str | None:
@@ -293,6 +309,7 @@ def power_quantity(  # noqa: PLR0913 - one call states one quantity in full
     -----
     The interval is the row's own, carried over; it opens where it reaches zero.
     """
+    row, sd = float(row), float(sd)
     half = float(stdtrit(dof, 0.975)) * sd if math.isfinite(dof) else 1.959963984540054 * sd
 
     def carry(x: float) -> float | None:

@@ -17,6 +17,7 @@ from reconcile.adapters.common import (
     medium_of,
     power_quantity,
     raise_problems,
+    size_law_of,
     slug,
     solutions,
     value_of,
@@ -32,7 +33,7 @@ from reconcile.evidence import (
     frozen_array,
 )
 from reconcile.measurement import ColumnSpec, Effect
-from reconcile.observables import SizeLaw, inverse_average, mean_square_radius
+from reconcile.observables import inverse_average, mean_square_radius
 
 if TYPE_CHECKING:
     from collections.abc import Mapping
@@ -42,6 +43,7 @@ if TYPE_CHECKING:
     from reconcile.adapters.common import Solutions
     from reconcile.errors import Problem
     from reconcile.measurement import Measurement, Sample, Table
+    from reconcile.observables import SizeLaw
 
     Array = NDArray[np.float64]
 
@@ -154,7 +156,7 @@ def prepare(measurement: Measurement, sample: Sample, effects: Mapping[str, Effe
         (*measurement.effects, *(e.id for e in own)),
         own,
         same_stock,
-        _size_law(measurement),
+        size_law_of(fields),
         tuple(assumptions),
         solution.findings,
         tuple(constants),
@@ -226,19 +228,6 @@ def _increment(
         u = entry["u"].value if entry["u"].kind == "ratio" else entry["u"].value / abs(value)
         own.append(Effect(f"{slug(measurement.name)}_dn_dc", "dn_dc", u, "dn/dc as stated"))
     return value, own, [Constant("dn/dc", value, "mL/g", origin, "stated")]
-
-
-def _size_law(measurement: Measurement) -> SizeLaw | None:
-    entry = measurement.fields.get("size_law")
-    if entry is None:
-        return None
-    return SizeLaw(
-        entry["K"].value,
-        float(entry["nu"]),
-        value_of(entry, "u_K") or 0.0,
-        value_of(entry, "M_ref") or 1e5,
-        str(entry.get("source", "")),
-    )
 
 
 def _scaled(cells: sf.Cells, factor: float) -> sf.Cells:

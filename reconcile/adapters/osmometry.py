@@ -1,0 +1,498 @@
+"""Membrane osmometry: Mn and A2 from osmotic pressures over concentration."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from reconcile.adapters.common import (
+    GAS_CONSTANT,
+    Adapter,
+    Flasks,
+    Scatter,
+    check_columns,
+    effect_derivatives,
+    group_flasks,
+    medium_of,
+    power_quantity,
+    raise_problems,
+    solutions,
+    value_of,
+)
+from reconcile.evidence import (
+    Alternative,
+    Constant,
+    Evidence,
+    Finding,
+    QuantityValue,
+    Reduction,
+    Row,
+    frozen_array,
+)
+from reconcile.linalg import least_squares
+from reconcile.measurement import ColumnSpec, Effect
+from reconcile.nonlinear import fit
+from reconcile.observables import inverse_average
+
+if TYPE_CHECKING:
+    from collections.abc import Mapping
+
+    from numpy.typing import NDArray
+
+    from reconcile.errors import Problem
+    from reconcile.measurement import Measurement, Sample, Table
+
+    Array = NDArray[np.float64]
+
+__all__ = ["ADAPTER", "prepare", "reduce"]
+
+COLUMNS: dict[str, ColumnSpec] = {
+    "c": ColumnSpec(("concentration",), ("conc", "concentration"), required=True),
+    "head": ColumnSpec(("length",), ("h", "height")),
+    "pi": ColumnSpec(("pressure",), ("π", "p", "pressure", "osmotic pressure")),
+}
+
+STANDARD_GRAVITY = 9.80665
+VIRIAL_RATIO_PRIOR = (0.25, 0.2)
+"""Mean and sd of g = A₃/(A₂² Mn); theory and experiment in good solvents span 0 to 0.5."""
+
+_G_PER_CM3 = 1e3  # kg/m³
+_CM = 1e-2  # m
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Series:
+    """A checked series: c in g/mL and π in Pa per reading, RT in J/mol · 1e6 (Pa mL/mol).
+
+    ``u_reading`` is absolute in Pa, or relative where ``is_relative``; None if none was stated.
+    """
+
+    name: str
+    medium: str | None
+    rt: float
+    c: Array
+    pi: Array
+    u_reading: float | None
+    is_relative: bool
+    u_flask: float
+    effects: Mapping[str, Effect]
+    named: tuple[str, ...]
+    own_effects: tuple[Effect, ...]
+    assumptions: tuple[str, ...]
+    findings: tuple[Finding, ...]
+    constants: tuple[Constant, ...]
+
+
+def prepare(measurement: Measurement, sample: Sample, effects: Mapping[str, Effect]) -> Series:
+    """Check the series and bring heads to pressures.
+
+    Raises
+    ------
+    InputError
+        With every problem found.
+    """
+    problems = check_columns(measurement, [("head", "pi")])
+    raise_problems(problems)
+    table = _table(measurement)
+    solution = solutions(measurement, sample, problems, allow_zero=False)
+    weight, constants = _specific_weight(measurement, problems)
+    u_reading, is_relative = _reading_error(measurement, weight, problems)
+    n_flasks = len(np.unique(solution.c))
+    if n_flasks < 2:
+        problems.append(
+            measurement.place.problem(
+                "readings",
+                f"found {n_flasks} concentration, expected at least 2",
+                "one concentration cannot separate Mn from A2",
+            )
+        )
+    raise_problems(problems)
+    pi = table.columns["pi"] if "pi" in table.columns else table.columns["head"] * weight
+    assert measurement.temperature is not None  # noqa: S101 - the schema requires it
+    everything = {**effects, **{effect.id: effect for effect in solution.effects}}
+    return Series(
+        measurement.name,
+        medium_of(measurement),
+        GAS_CONSTANT * measurement.temperature * 1e6,
+        solution.c,
+        pi,
+        u_reading,
+        is_relative,
+        value_of(measurement.fields, "u_concentration") or 0.0,
+        everything,
+        (*measurement.effects, *(effect.id for effect in solution.effects)),
+        solution.effects,
+        solution.assumptions,
+        solution.findings,
+        constants,
+    )
+
+
+def _table(measurement: Measurement) -> Table:
+    assert measurement.table is not None  # noqa: S101 - check_columns came first
+    return measurement.table
+
+
+def _specific_weight(
+    measurement: Measurement, problems: list[Problem]
+) -> tuple[float, tuple[Constant, ...]]:
+    """Return the pressure in Pa of 1 cm of the manometer's liquid; 0 where it is not needed."""
+    density = value_of(measurement.fields, "liquid_density")
+    gravity = value_of(measurement.fields, "gravity")
+    listed = [Constant("R", GAS_CONSTANT, "J/(mol K)", "CODATA 2018, exact by the SI", "computed")]
+    if density is None:
+        if "head" in _table(measurement).columns:
+            problems.append(
+                measurement.place.problem(
+                    "liquid_density",
+                    "is missing, and heads need it",
+                    'give the density of the liquid in the manometer: "0.800 g/mL"',
+                )
+            )
+        return 0.0, tuple(listed)
+    origin = "standard gravity, CGPM 1901" if gravity is None else "stated"
+    g = STANDARD_GRAVITY if gravity is None else gravity
+    listed += [
+        Constant("g", g, "m/s²", origin, "computed" if gravity is None else "stated"),
+        Constant("density of the manometer's liquid", density, "g/mL", "case", "stated"),
+    ]
+    return density * _G_PER_CM3 * g * _CM, tuple(listed)
+
+
+def _reading_error(
+    measurement: Measurement, weight: float, problems: list[Problem]
+) -> tuple[float | None, bool]:
+    entry = measurement.fields.get("u_reading")
+    if entry is None:
+        return None, False
+    if entry.kind == "ratio":
+        return entry.value, True
+    if entry.kind == "length":
+        if weight == 0.0:
+            problems.append(
+                measurement.place.problem(
+                    "u_reading", f'"{entry.text}" is a length, and liquid_density is not given',
+                    "state it as a pressure, or give liquid_density",
+                )
+            )
+        return entry.value * weight, False
+    return entry.value, False
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class _Virial:
+    """The default fit: (1/Mn, A2, g) with covariance, and what the scatter said."""
+
+    values: Array
+    covariance: Array
+    scatter: Scatter
+    has_intercept: bool
+
+
+def _pressure(rt: float, values: Array, c: Array) -> Array:
+    """Return π = RT c (I + A₂c + g A₂²c²/I) in Pa, I = 1/Mn."""
+    i, a2, g = values
+    return np.asarray(rt * c * (i + a2 * c + g * (a2 * c) ** 2 / i))
+
+
+def _pressure_slopes(rt: float, values: Array, c: Array) -> tuple[Array, Array]:
+    """Return ∂π/∂(I, A₂, g), shape (k, 3), and ∂π/∂ ln c."""
+    i, a2, g = values
+    square = (a2 * c) ** 2 / i
+    columns = [1.0 - g * square / i, c + 2.0 * g * a2 * c**2 / i, square]
+    by_c = rt * c * (i + 2.0 * a2 * c + 3.0 * g * square)
+    return rt * c[:, None] * np.column_stack(columns), by_c
+
+
+def _fit_virial(series: Series, flasks: Flasks) -> _Virial:
+    """Fit pressures by flask with g under its prior, marginalised by its place in the covariance.
+
+    Notes
+    -----
+    The error of a flask's concentration moves c and π together, so it enters as
+    u(π) = u_c ∂π/∂ ln c at the fitted line. The scatter multiplies the readings' part of the
+    covariance, never the prior's.
+    """
+    line = least_squares(
+        np.column_stack([np.ones_like(flasks.c), flasks.c]),
+        flasks.mean / (series.rt * flasks.c),
+        1.0 / flasks.c,
+    ).coefficients
+    start_i = line[0] if line[0] > 0.0 else float(np.min(flasks.mean / (series.rt * flasks.c)))
+    values = np.array([start_i, line[1], VIRIAL_RATIO_PRIOR[0]])
+    scale2, bound = 1.0, False
+    for _ in range(3):
+        sd = _flask_sd(series, flasks, values)
+        found = _solve(series, flasks, values, sd * math.sqrt(scale2))
+        values, bound = found[0], found[2]
+        sd = _flask_sd(series, flasks, values)
+        misfit = (flasks.mean - _pressure(series.rt, values, flasks.c)) / sd
+        chi2 = float(misfit @ misfit) + _within(series, flasks)
+        dof = len(flasks.c) - 2 + flasks.within_dof
+        scatter = Scatter.of(chi2, dof, stated=series.u_reading is not None)
+        if not math.isfinite(scatter.scale2):
+            break
+        scale2 = max(scatter.scale2, 1e-20)
+    if not math.isfinite(scatter.scale2):
+        return _Virial(values, np.full((3, 3), np.nan), scatter, not bound)
+    return _Virial(values, found[1], scatter, not bound)
+
+
+def _unit_error(series: Series, flasks: Flasks) -> Array:
+    """Return the error of one reading in Pa per flask; the mean pressure where none was stated."""
+    if series.u_reading is None:
+        # only ratios of weights matter: a constant absolute error
+        return np.full_like(flasks.c, float(np.mean(np.abs(flasks.mean))))
+    if series.is_relative:
+        return np.abs(flasks.mean) * series.u_reading
+    return np.full_like(flasks.c, series.u_reading)
+
+
+def _within(series: Series, flasks: Flasks) -> float:
+    unit = _unit_error(series, flasks)
+    return float(np.sum(((series.pi - flasks.mean[flasks.index]) / unit[flasks.index]) ** 2))
+
+
+def _flask_sd(series: Series, flasks: Flasks, values: Array) -> Array:
+    _, by_c = _pressure_slopes(series.rt, values, flasks.c)
+    reading = _unit_error(series, flasks) / np.sqrt(flasks.count)
+    return np.asarray(np.hypot(reading, series.u_flask * by_c))
+
+
+def _solve(
+    series: Series, flasks: Flasks, start: Array, sd: Array
+) -> tuple[Array, Array, bool]:
+    """Return (I, A₂, g), their covariance, and whether I ended on its bound."""
+    scale = np.array([start[0], max(abs(start[1]), start[0] / flasks.c[-1]), 1.0])
+    centre, width = VIRIAL_RATIO_PRIOR
+
+    def residual(p: Array) -> Array:
+        values = p * scale
+        misfit = (_pressure(series.rt, values, flasks.c) - flasks.mean) / sd
+        return np.append(misfit, (values[2] - centre) / width)
+
+    def jacobian(p: Array) -> Array:
+        slopes, _ = _pressure_slopes(series.rt, p * scale, flasks.c)
+        prior = np.array([0.0, 0.0, 1.0 / width])
+        return np.vstack([slopes / sd[:, None], prior]) * scale
+
+    lower = np.array([1e-3, -np.inf, -np.inf])
+    found = fit(residual, jacobian, start / scale, lower)
+    return found.values * scale, found.covariance * np.outer(scale, scale), found.at_bound[0]
+
+
+def reduce(series: Series) -> Reduction:
+    """Return Mn and A2 with their evidence, alternatives and findings."""
+    flasks = group_flasks(series.c, series.pi)
+    virial = _fit_virial(series, flasks)
+    rows = _rows(series, virial)
+    quantities = _quantities(series, virial, rows)
+    alternatives = _alternatives(series)
+    findings = _findings(series, flasks, virial, quantities, alternatives)
+    known = bool(np.isfinite(virial.covariance).all())
+    evidence = None
+    if known:
+        evidence = Evidence(
+            series.name, rows, frozen_array(virial.values[:2]), frozen_array(virial.covariance[:2, :2])
+        )
+    return Reduction(
+        series.name,
+        "osmometry",
+        "virial series, g by prior",
+        quantities,
+        evidence,
+        alternatives,
+        (*series.findings, *findings),
+        (),
+        _readings(series, flasks, virial),
+        _fit_summary(series, virial),
+        series.constants,
+        series.assumptions,
+        series.own_effects,
+    )
+
+
+def _rows(series: Series, virial: _Virial) -> tuple[Row, ...]:
+    nu = virial.scatter.dof
+    # I and A2 both scale as π/(RT); I falls with c, A2 with c²
+    inverse = {"concentration": -1.0, "pressure": 1.0, "temperature": -1.0}
+    slope = {"concentration": -2.0, "pressure": 1.0, "temperature": -1.0}
+    return (
+        Row(
+            "Mn", inverse_average("Mn"), "1/Mn [mol/g]", nu,
+            effect_derivatives(series.effects, series.named, inverse), series.medium,
+        ),
+        Row(
+            "A2", None, "A2 [mol mL/g²]", nu,
+            effect_derivatives(series.effects, series.named, slope), series.medium,
+        ),
+    )  # fmt: skip
+
+
+_UNKNOWN = "no reading error was stated and there is no scatter to learn it from"
+
+
+def _quantities(
+    series: Series, virial: _Virial, rows: tuple[Row, ...]
+) -> dict[str, QuantityValue]:
+    i, a2, g = (float(x) for x in virial.values)
+    if not np.isfinite(virial.covariance).all():
+        return {
+            "Mn": QuantityValue(1.0 / i, "g/mol", why=_UNKNOWN),
+            "A2": QuantityValue(a2, "mol mL/g²", why=_UNKNOWN),
+        }
+    sd = np.sqrt(np.diag(virial.covariance))
+
+    def shared(row: Row) -> float:
+        parts = [d * series.effects[key].u for key, d in row.derivatives.items()]
+        return math.hypot(*parts) if parts else 0.0
+
+    nu = virial.scatter.dof
+    return {
+        "Mn": power_quantity(
+            i, sd[0], nu, power=-1.0, factor=1.0, unit="g/mol", u_effects=shared(rows[0])
+        ),
+        "A2": power_quantity(
+            a2, sd[1], nu, power=1.0, factor=1.0, unit="mol mL/g²", u_effects=shared(rows[1])
+        ),
+        "third_virial_ratio": power_quantity(
+            g, sd[2], math.inf, power=1.0, factor=1.0, unit="1", u_effects=0.0
+        ),
+    }
+
+
+def _alternatives(series: Series) -> tuple[Alternative, ...]:
+    c, y = series.c, series.pi / (series.rt * series.c)
+    n_flasks = len(np.unique(c))
+    found = [Alternative("straight line, equal weights", _polynomial(c, y, 1, 1.0))]
+    found.append(Alternative("straight line, weighted", _polynomial(c, y, 1, 1.0 / c)))
+    if (y > 0.0).all():
+        found.append(Alternative("square root, equal weights", _square_root(c, y)))
+    if n_flasks >= 3:
+        found.append(Alternative("quadratic, equal weights", _polynomial(c, y, 2, 1.0)))
+    return tuple(found)
+
+
+def _polynomial(c: Array, y: Array, degree: int, sd: Array | float) -> dict[str, QuantityValue]:
+    fitted = least_squares(np.vander(c, degree + 1, increasing=True), y, sd)
+    return _from_line(
+        fitted.coefficients[:2], fitted.scatter_covariance()[:2, :2], fitted.dof, np.eye(2)
+    )
+
+
+def _square_root(c: Array, y: Array) -> dict[str, QuantityValue]:
+    """√(π/cRT) on a line: 1/Mn is its intercept squared, A2 twice intercept times slope."""
+    fitted = least_squares(np.column_stack([np.ones_like(c), c]), np.sqrt(y))
+    root, slope = fitted.coefficients
+    carry = np.array([[2.0 * root, 0.0], [2.0 * slope, 2.0 * root]])
+    values = np.array([root**2, 2.0 * root * slope])
+    return _from_line(values, fitted.scatter_covariance(), fitted.dof, carry)
+
+
+def _from_line(
+    values: Array, covariance: Array, dof: int, carry: Array
+) -> dict[str, QuantityValue]:
+    inverse, a2 = (float(x) for x in values)
+    if dof < 1:
+        why = "as many readings as unknowns"
+        mn = 1.0 / inverse if inverse > 0.0 else None
+        return {
+            "Mn": QuantityValue(mn, "g/mol", why=why),
+            "A2": QuantityValue(a2, "mol mL/g²", why=why),
+        }
+    sd = np.sqrt(np.diag(carry @ covariance @ carry.T))
+    return {
+        "Mn": power_quantity(
+            inverse, sd[0], dof, power=-1.0, factor=1.0, unit="g/mol", u_effects=0.0
+        ),
+        "A2": power_quantity(
+            a2, sd[1], dof, power=1.0, factor=1.0, unit="mol mL/g²", u_effects=0.0
+        ),
+    }
+
+
+def _findings(
+    series: Series,
+    flasks: Flasks,
+    virial: _Virial,
+    quantities: Mapping[str, QuantityValue],
+    alternatives: tuple[Alternative, ...],
+) -> list[Finding]:
+    found: list[Finding] = []
+
+    def add(code: str, severity: str, text: str, remedy: str) -> None:
+        found.append(Finding(code, severity, text, remedy, series.name))
+
+    scatter = virial.scatter
+    if series.u_reading is None:
+        text = "no reading error was stated: the scatter of the readings sets the scale"
+        add("no-stated-error", "note", text, "state u_reading, from repeated zero readings")
+    elif scatter.p_value < 0.01:
+        text = (
+            f"readings scatter {math.sqrt(scatter.ratio):.2g} times as much as stated"
+            f" (p = {scatter.p_value:.1g})"
+        )
+        add("scatter-exceeds-stated", "warning", text, "look for drift, a leak, or a bad flask")
+    if not virial.has_intercept:
+        text = "the ordinate intercept is not positive: Mn is beyond what these readings resolve"
+        add("no-intercept", "warning", text, "more concentrated solutions, or another method")
+    top = float(virial.values[1] / virial.values[0] * flasks.c[-1])
+    if top > 1.0:
+        text = f"A2·Mn·c reaches {top:.2g}; terms beyond the third virial one matter there"
+        add("concentrations-too-high", "warning", text, "measure lower concentrations")
+    if len(flasks.c) < 4:
+        text = f"{len(flasks.c)} concentrations leave little to check the extrapolation with"
+        add("few-concentrations", "caution", text, "measure at least four")
+    _form_finding(alternatives, flasks, virial, add)
+    return found
+
+
+def _form_finding(
+    alternatives: tuple[Alternative, ...], flasks: Flasks, virial: _Virial, add: Any
+) -> None:
+    by_form = {a.form: a.quantities["Mn"] for a in alternatives}
+    line = by_form["straight line, equal weights"]
+    root = by_form.get("square root, equal weights")
+    if root is None or not (line.value and root.value and line.u and root.u):
+        return
+    gap = abs(math.log(line.value / root.value))
+    if gap > 2.0 * math.hypot(line.u / line.value, root.u / root.value):
+        reach = 0.15 * virial.values[0] / max(abs(virial.values[1]), 1e-30)
+        low = f"{1e3 * min(reach, flasks.c[-1]):.2g} g/L"
+        text = f"straight and square-root lines differ by {100 * gap:.2g} % in Mn, over their errors"
+        add("forms-differ", "warning", text, f"concentrations up to {low} would settle it")
+
+
+def _readings(series: Series, flasks: Flasks, virial: _Virial) -> dict[str, tuple[float, ...]]:
+    fitted = _pressure(series.rt, virial.values, series.c)
+    # the plot's ordinate in mol/kg, so that 1/Mn in mol/g is not lost in zeros
+    return {
+        "c [g/L]": tuple((1e3 * series.c).tolist()),
+        "pi [Pa]": tuple(series.pi.tolist()),
+        "fitted pi [Pa]": tuple(fitted.tolist()),
+        "pi/(cRT) [mol/kg]": tuple((1e3 * series.pi / (series.rt * series.c)).tolist()),
+        "u of one reading [Pa]": tuple(
+            [None if series.u_reading is None else float(x) for x in _unit_error(series, flasks)[flasks.index]]
+        ),
+    }
+
+
+def _fit_summary(series: Series, virial: _Virial) -> dict[str, Any]:
+    i, a2, g = (float(x) for x in virial.values)
+    grid = np.linspace(0.0, float(series.c.max()), 41)
+    curve = i + a2 * grid + g * (a2 * grid) ** 2 / i
+    return {
+        "1/Mn [mol/g]": i,
+        "A2 [mol mL/g²]": a2,
+        "third virial ratio g": g,
+        "scatter over stated": math.sqrt(virial.scatter.scale2) if virial.scatter.scale2 >= 0 else None,
+        "dof": virial.scatter.dof,
+        "curve c [g/L]": (1e3 * grid).tolist(),
+        "curve pi/(cRT) [mol/kg]": (1e3 * curve).tolist(),
+    }
+
+
+ADAPTER = Adapter("osmometry", COLUMNS, prepare, reduce)
