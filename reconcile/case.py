@@ -185,7 +185,7 @@ def _toml_problem(shown: str, text: str, message: str) -> Problem:
     number = int(match[1]) if match and match[1] else 0
     lines = text.split("\n")
     line = lines[number - 1] if 0 < number <= len(lines) else ""
-    what = message.split(" (at ")[0]
+    what = message.split(" (at ", maxsplit=1)[0]
     what = what[:1].lower() + what[1:]
     remedy = ""
     if re.search(r"=\s*-?\d+,\d", line):
@@ -199,7 +199,7 @@ def _toml_problem(shown: str, text: str, message: str) -> Problem:
     return Problem(shown, number, "", f"not valid TOML: {what}", remedy)
 
 
-def _converted(  # noqa: PLR0913 - a recursive walk carries its context
+def _converted(
     value: Any,
     schema: Mapping[str, Any],
     path: KeyPath,
@@ -327,9 +327,7 @@ def _measurement(
                 table, hashes[name] = read_table(found, name, columns)
             except InputError as error:
                 problems.extend(error.problems)
-    lines = {
-        path_text(key[2:]): line for key, line in document.lines.items() if key[:2] == place
-    }
+    lines = {path_text(key[2:]): line for key, line in document.lines.items() if key[:2] == place}
     temperature = entry.get("temperature")
     default = f"{technique} {entry.get('quantity', place[1] + 1)}"
     effects = entry.get("effects", [])

@@ -1,8 +1,8 @@
 """Non-linear least squares; lmfit lives here and nowhere else.
 
 Whitened residuals and their Jacobian in, our own result out. The trust-region solver with bounds is
-named explicitly, the covariance is never scaled by the scatter (that would hide contradictions), and
-no expression ever reaches lmfit.
+named explicitly, the covariance is never scaled by the scatter (that would hide contradictions),
+and no expression ever reaches lmfit.
 """
 
 from __future__ import annotations

@@ -70,21 +70,39 @@ def validate(document: Any, name: str) -> Iterator[SchemaFault]:
         yield from _explain(error)
 
 
+@dataclass(frozen=True, slots=True)
+class _Broken:
+    """A validation error with its parts as plain values."""
+
+    path: tuple[str | int, ...]
+    rule: str
+    limit: Any
+    instance: Any
+    schema: dict[str, Any]
+    message: str
+
+
 def _explain(error: ValidationError) -> Iterator[SchemaFault]:
-    path = tuple(error.absolute_path)
-    rule = str(error.validator)
-    if rule == "additionalProperties":
-        yield from _unknown(error, path)
-    elif rule == "required":
-        missing = [key for key in error.validator_value if key not in error.instance]
+    broken = _Broken(
+        tuple(error.absolute_path),
+        str(error.validator),
+        error.validator_value,
+        error.instance,
+        dict(error.schema) if isinstance(error.schema, dict) else {},
+        error.message,
+    )
+    if broken.rule == "additionalProperties":
+        yield from _unknown(broken)
+    elif broken.rule == "required":
+        missing = [key for key in broken.limit if key not in broken.instance]
         # jsonschema raises one error per missing key, each naming it first
-        key = next(k for k in missing if error.message.startswith(repr(k)))
-        yield SchemaFault(path, f"{key!r} is missing", _hint(error.schema, key))
+        key = next(k for k in missing if broken.message.startswith(repr(k)))
+        yield SchemaFault(broken.path, f"{key!r} is missing", _hint(broken.schema, key))
     else:
-        yield SchemaFault(path, _sentence(error, rule))
+        yield SchemaFault(broken.path, _sentence(broken))
 
 
-def _unknown(error: ValidationError, path: tuple[str | int, ...]) -> Iterator[SchemaFault]:
+def _unknown(error: _Broken) -> Iterator[SchemaFault]:
     known = list(error.schema.get("properties", {}))
     patterns = error.schema.get("patternProperties", {})
     for key in error.instance:
@@ -94,7 +112,7 @@ def _unknown(error: ValidationError, path: tuple[str | int, ...]) -> Iterator[Sc
         remedy = f"did you mean {near[0]!r}?" if near else f"known: {', '.join(sorted(known)[:12])}"
         if patterns:
             remedy = "use lower-case letters, digits and underscores, a letter first"
-        yield SchemaFault((*path, key), "unknown key", remedy)
+        yield SchemaFault((*error.path, key), "unknown key", remedy)
 
 
 def _hint(schema: dict[str, Any], key: str) -> str:
@@ -109,10 +127,10 @@ _TYPES = {
 }  # fmt: skip
 
 
-def _sentence(error: ValidationError, rule: str) -> str:
+def _sentence(error: _Broken) -> str:
     found = json.dumps(error.instance, ensure_ascii=False, default=str)
     found = found if len(found) <= 60 else found[:57] + "…"
-    value = error.validator_value
+    rule, value = error.rule, error.limit
     if rule == "type":
         kinds = [value] if isinstance(value, str) else list(value)
         return f"found {found}, expected {' or '.join(_TYPES[k] for k in kinds)}"

@@ -12,7 +12,7 @@ import io
 import re
 from dataclasses import dataclass
 from difflib import get_close_matches
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 from reconcile.errors import InputError, Problem
 from reconcile.measurement import Table
@@ -21,6 +21,8 @@ from reconcile.units import UnitError, parse_number, parse_unit
 if TYPE_CHECKING:
     from collections.abc import Mapping, Sequence
     from pathlib import Path
+
+    from numpy.typing import NDArray
 
     from reconcile.measurement import ColumnSpec
 
@@ -67,9 +69,7 @@ def read_bytes(path: Path, shown: str) -> bytes:
         raise InputError([Problem(shown, 0, "", str(reason).lower(), remedy)]) from error
 
 
-def read_table(
-    path: Path, shown: str, columns: Mapping[str, ColumnSpec]
-) -> tuple[Table, str]:
+def read_table(path: Path, shown: str, columns: Mapping[str, ColumnSpec]) -> tuple[Table, str]:
     """Read a table and return it with the SHA-256 of its bytes.
 
     Parameters
@@ -113,11 +113,8 @@ def read_table(
 
 def _decode(raw: bytes, shown: str) -> str:
     """Return the text: by its byte-order mark, else strict UTF-8, else Windows Latin-1."""
-    if raw.startswith((b"\xff\xfe", b"\xfe\xff")):
-        encoding = "utf-16"
-    else:
-        encoding = "utf-8-sig"
-    for attempt in (encoding, "cp1252"):
+    marked = raw.startswith((b"\xff\xfe", b"\xfe\xff"))
+    for attempt in ("utf-16" if marked else "utf-8-sig", "cp1252"):
         try:
             text = raw.decode(attempt)
         except UnicodeDecodeError:
@@ -222,11 +219,11 @@ def _values(
     heads: Sequence[tuple[str, float, str, int]],
     shown: str,
     problems: list[Problem],
-) -> dict[str, object]:
+) -> dict[str, NDArray[Any]]:
     import numpy as np  # noqa: PLC0415 - a broken table costs no import
 
     comma = _has_decimal_comma(body, heads, shown)
-    columns: dict[str, object] = {}
+    columns: dict[str, NDArray[Any]] = {}
     for key, factor, _, position in heads:
         numbers = []
         for line in body:

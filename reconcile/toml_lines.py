@@ -24,11 +24,11 @@ _QUOTED = re.compile(
 
 
 def line_map(text: str) -> dict[KeyPath, int]:
-    """Return key path → 1-based line of a text that is valid TOML.
+    r"""Return key path → 1-based line of a text that is valid TOML.
 
     Examples
     --------
-    >>> line_map('a = 1\\n[[b]]\\nc = 2\\n[[b]]\\nc = 3\\n')[("b", 1, "c")]
+    >>> line_map('a = 1\n[[b]]\nc = 2\n[[b]]\nc = 3\n')[("b", 1, "c")]
     5
     """
     lines: dict[KeyPath, int] = {(): 1}
@@ -59,7 +59,7 @@ def line_map(text: str) -> dict[KeyPath, int]:
 
 def _inside_strings(text: str) -> set[int]:
     """Return the lines that start inside a string of several lines."""
-    inside = set()
+    inside: set[int] = set()
     for match in _QUOTED.finditer(text):
         first = text.count("\n", 0, match.start()) + 1
         inside.update(range(first + 1, first + 1 + match[0].count("\n")))

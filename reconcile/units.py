@@ -50,9 +50,7 @@ class Kind:
 
 
 # symbol → (factor to kg, m, s, K, mol; exponents of those)
-_MASS, _LENGTH, _TIME, _KELVIN, _AMOUNT = (
-    tuple(int(i == j) for j in range(5)) for i in range(5)
-)
+_MASS, _LENGTH, _TIME, _KELVIN, _AMOUNT = (tuple(int(i == j) for j in range(5)) for i in range(5))
 _PRESSURE = (1, -1, -2, 0, 0)
 _NONE = (0, 0, 0, 0, 0)
 _ATOMS: Mapping[str, tuple[float, tuple[int, ...]]] = MappingProxyType(
@@ -102,7 +100,9 @@ KINDS: Mapping[str, Kind] = MappingProxyType(
         "angle": Kind("angle", "rad", "90 deg", _NONE),
         "temperature": Kind("temperature", "K", "25 degC", _KELVIN),
         "molar_mass": Kind("molar mass", "g/mol", "120 kg/mol", (1, 0, 0, 0, -1)),
-        "inverse_molar_mass": Kind("reciprocal molar mass", "mol/g", "4e-6 mol/g", (-1, 0, 0, 0, 1)),
+        "inverse_molar_mass": Kind(
+            "reciprocal molar mass", "mol/g", "4e-6 mol/g", (-1, 0, 0, 0, 1)
+        ),
         "viscosity_number": Kind("viscosity number", "mL/g", "75 mL/g", (-1, 3, 0, 0, 0)),
         "specific_volume": Kind("specific volume", "mL/g", "0.84 mL/g", (-1, 3, 0, 0, 0)),
         "dn_dc": Kind("refractive index increment", "mL/g", "0.080 mL/g", (-1, 3, 0, 0, 0)),
@@ -122,12 +122,12 @@ _CELSIUS = {"°C", "degC", "deg C", "C", "℃"}
 _ANGLE_UNITS = {"deg", "rad"}
 _NUMBER = re.compile(r"[+-]?(?:\d+(?:\.\d*)?|\.\d+)(?:[eE][+-]?\d+)?")
 _SUPERSCRIPT = str.maketrans("⁰¹²³⁴⁵⁶⁷⁸⁹⁻", "0123456789-")
-_TOKEN = re.compile(
-    r"\s*(?:(?P<op>[*·⋅×/()])"
-    r"|(?P<symbol>[A-Za-zÅ°%][A-Za-z0-9]*?)(?:\^|\*\*)?(?P<power>-?[1-6])?(?![A-Za-z0-9])"
-    r"|(?P<number>1000?|1))"
+_HUNDRED = re.compile(r"/\s*\(?\s*100\s*(?:mL|ml|cm\^?3)\s*\)?(?!\w)")
+_BRACKETS = re.compile(r"/\s*\(([^()/]+)\)")
+_FACTOR = re.compile(
+    r"(?P<op>\s*[*·⋅×/]\s*|\s+|)"
+    r"(?P<symbol>cmH2O|mmH2O|1|[A-Za-zÅ°%]+)(?:\^|\*\*)?(?P<power>-?[1-6])?(?![A-Za-z0-9])"
 )
-_NAMED = re.compile(r"(cmH2O|mmH2O)")
 
 
 def parse_number(text: str) -> float:
@@ -155,9 +155,7 @@ def parse_number(text: str) -> float:
 
 
 def _canonical(text: str) -> str:
-    text = re.sub(
-        "[⁰¹²³⁴⁵⁶⁷⁸⁹⁻]+", lambda m: "^" + m[0].translate(_SUPERSCRIPT), text.strip()
-    )
+    text = re.sub("[⁰¹²³⁴⁵⁶⁷⁸⁹⁻]+", lambda m: "^" + m[0].translate(_SUPERSCRIPT), text.strip())
     return text.replace("µ", "u").replace("μ", "u").replace("−", "-").replace("℃", "°C")
 
 
@@ -175,42 +173,25 @@ def _atom(symbol: str) -> tuple[float, tuple[int, ...]]:
 def _product(text: str) -> tuple[float, tuple[int, ...]]:
     """Return the SI factor and the dimensions of a product of units such as ``g L-1``.
 
-    A slash turns the next factor only, or a bracket; ``g/100 mL`` is read as ``g/(100 mL)``, the one
-    number people put inside a unit.
+    A slash turns the next factor only, or a bracket; ``g/100 mL`` is read as ``g/(100 mL)``, the
+    one number people put inside a unit.
     """
-    rest = _NAMED.sub(lambda m: m[1].replace("2", "two"), _canonical(text))
-    rest = re.sub(r"/\s*\(?\s*100\s*(?:mL|ml|cm\^?3)\s*\)?(?!\w)", "/dL", rest)
-    factor, dimensions = 1.0, [0] * 5
-    sign, below, stack, wants = 1, 1, [], True
-    position = 0
-    while position < len(rest.rstrip()):
-        match = _TOKEN.match(rest, position)
-        if match is None:
+    rest = _HUNDRED.sub("/dL", _canonical(text))
+    rest = _BRACKETS.sub(lambda m: f"/{m[1].replace(' ', '/').replace('*', '/')}", rest)
+    factor, dimensions, position = 1.0, (0,) * 5, 0
+    while position < len(rest):
+        match = _FACTOR.match(rest, position)
+        # an operator or a space stands between two factors, and nothing before the first
+        if match is None or (position == 0) == bool(match["op"]):
             raise UnitError(f'"{text}" is not a unit')
+        atom = _atom(match["symbol"])
+        power = int(match["power"] or 1) * (-1 if "/" in match["op"] else 1)
+        factor *= atom[0] ** power
+        dimensions = tuple(d + power * a for d, a in zip(dimensions, atom[1], strict=True))
         position = match.end()
-        op, symbol = match["op"], match["symbol"]
-        if op == "(" and wants:
-            stack.append(sign)
-            sign, below = sign * below, 1
-        elif op == ")" and stack and not wants:
-            sign = stack.pop()
-        elif op == "/" and not wants:
-            below, wants = -1, True
-        elif op is not None and op in "*·⋅×" and not wants:
-            wants = True
-        elif symbol is not None or (match["number"] == "1" and wants and position == match.end()):
-            atom, power = (
-                _atom(symbol.replace("two", "2")) if symbol else _ATOMS["1"],
-                int(match["power"] or 1) * sign * below,
-            )
-            factor *= atom[0] ** power
-            dimensions = [d + power * a for d, a in zip(dimensions, atom[1], strict=True)]
-            below, wants = 1, False
-        else:
-            raise UnitError(f'"{text}" is not a unit')
-    if wants or stack:
+    if position == 0:
         raise UnitError(f'"{text}" is not a unit')
-    return factor, tuple(dimensions)
+    return factor, dimensions
 
 
 def _internal_factor(kind: str) -> float:

@@ -241,7 +241,7 @@ class Solution:
 class Osmometer:
     """Membrane osmometry: flasks in g/L; `quantity` "head" (mm) or "pi" (Pa), as is u_reading."""
 
-    concentrations: tuple[float, ...] = (1.5, 3.0, 4.5, 6.0, 7.5, 9.0)
+    concentrations: tuple[float, ...] = (1.0, 2.0, 3.0, 4.0, 5.0, 6.0)
     replicates: int = 2
     quantity: str = "head"
     liquid_density: float = 0.7997

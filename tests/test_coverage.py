@@ -1,11 +1,12 @@
 """Do the intervals hold? Laboratories drawn by the independent generator, from raw readings.
 
-The oracle beside each width knows the family, the form factor, the virial and Huggins terms, and the
-exact size of every error, but none of their values (`generator.oracle_sd`).
+The oracle beside each width knows the family, the form factor, the virial and Huggins terms, and
+the exact size of every error, but none of their values (`generator.oracle_sd`).
 """
 
 import math
 import os
+import sys
 from dataclasses import replace
 from pathlib import Path
 
@@ -64,7 +65,7 @@ def test_three_techniques_cover_and_are_not_wide(tmp_path):
     sd = np.array([oracle.ln_dispersity, oracle.ln_Mn, oracle.ln_Mw])
     width = np.log(found[:, :, 1] / found[:, :, 0]).mean(axis=0) / (2.0 * 1.959964 * sd)
     for name, cover, ratio in zip(NAMES, covered, width, strict=True):
-        print(f"{name}: coverage {cover:.3f}, width over oracle {ratio:.3f}")
+        sys.stdout.write(f"{name}: coverage {cover:.3f}, width over oracle {ratio:.3f}\n")
     # three standard errors of 500 Bernoulli draws about the ends are 0.036 and 0.013; the bounds
     # are the required ones, not widened
     assert (covered >= 0.92).all(), covered

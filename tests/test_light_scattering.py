@@ -7,7 +7,8 @@ import generator
 import numpy as np
 import pytest
 
-from reconcile.adapters.light_scattering import optical_constant, prepare, reduce
+from reconcile.adapters.light_scattering import reduce
+from reconcile.adapters.scattering_series import optical_constant, prepare
 from reconcile.errors import InputError
 from reconcile.measurement import Effect, Measurement, Place, Quantity, Sample, Table
 

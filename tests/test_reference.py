@@ -89,8 +89,8 @@ def test_benzene_grid_default_spans_the_forms(reduced):
 
 
 def test_exact_surface(reduced):
-    """Biopolymer text TBT4135 (NTNU): Mw 198 000, A2 3.0e-3, Rg 57 nm; its plotting constant is half
-    of what its own slope needs, which must not matter."""
+    """Biopolymer text TBT4135 (NTNU): Mw 198 000, A2 3.0e-3, Rg 57 nm; its plotting constant is
+    half of what its own slope needs, which must not matter."""
     m = reduced("biopolymer-generator")["photometer"]
 
     plane = alternative(m, "Zimm plane, equal weights")

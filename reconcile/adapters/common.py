@@ -7,7 +7,6 @@ import re
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
-import numpy as np
 from scipy.special import stdtrit
 
 from reconcile.errors import InputError, Problem
@@ -18,10 +17,11 @@ from reconcile.observables import SizeLaw
 if TYPE_CHECKING:
     from collections.abc import Callable, Iterable, Mapping, Sequence
 
+    import numpy as np
     from numpy.typing import NDArray
 
     from reconcile.evidence import Reduction
-    from reconcile.measurement import ColumnSpec, Measurement, Sample
+    from reconcile.measurement import ColumnSpec, Measurement, Sample, Table
 
     Array = NDArray[np.float64]
 
@@ -30,18 +30,18 @@ __all__ = [
     "PRIOR_DOF",
     "SOLIDS_EFFECT",
     "Adapter",
-    "Flasks",
     "Scatter",
     "Solutions",
     "check_columns",
     "effect_derivatives",
-    "group_flasks",
     "medium_of",
     "power_quantity",
     "raise_problems",
+    "scatter_finding",
     "size_law_of",
     "slug",
     "solutions",
+    "table_of",
     "value_of",
 ]
 
@@ -80,22 +80,6 @@ class Solutions:
     assumptions: tuple[str, ...]
     findings: tuple[Finding, ...]
     effects: tuple[Effect, ...]
-
-
-@dataclass(frozen=True, slots=True, eq=False)
-class Flasks:
-    """Readings grouped by flask (equal concentration).
-
-    ``c`` and ``mean`` (k,), ``count`` (k,), ``within`` the sum of squares about the flask means and
-    ``within_dof`` its degrees of freedom; ``index`` (n,) maps each reading to its flask.
-    """
-
-    c: Array
-    mean: Array
-    count: Array
-    within: float
-    within_dof: int
-    index: NDArray[np.intp]
 
 
 @dataclass(frozen=True, slots=True)
@@ -203,6 +187,30 @@ def check_columns(measurement: Measurement, groups: Iterable[Sequence[str]]) -> 
     return problems
 
 
+def table_of(measurement: Measurement) -> Table:
+    """Return the table of a measurement that has passed `check_columns`."""
+    assert measurement.table is not None  # noqa: S101 - check_columns came first
+    return measurement.table
+
+
+def scatter_finding(name: str, scatter: Scatter, look_for: str) -> tuple[Finding, ...]:
+    """Return what the scatter says against a stated reading error; nothing where it agrees.
+
+    A NaN p-value means that none was stated.
+    """
+    if math.isnan(scatter.p_value):
+        text = "no reading error was stated: the scatter of the readings sets the scale"
+        remedy = "state u_reading, from repeated readings"
+        return (Finding("no-stated-error", "note", text, remedy, name),)
+    if scatter.p_value >= 0.01:
+        return ()
+    text = (
+        f"readings scatter {math.sqrt(scatter.ratio):.2g} times as much as stated"
+        f" (p = {scatter.p_value:.1g})"
+    )
+    return (Finding("scatter-exceeds-stated", "warning", text, look_for, name),)
+
+
 def solutions(
     measurement: Measurement, sample: Sample, problems: list[Problem], *, allow_zero: bool
 ) -> Solutions:
@@ -212,8 +220,7 @@ def solutions(
     -----
     c = c_table · solids · ρ_run/ρ_prepared: the volume expands, the mass does not.
     """
-    assert measurement.table is not None  # noqa: S101 - check_columns came first
-    table = measurement.table
+    table = table_of(measurement)
     nominal = table.columns["c"]
     for row, value in enumerate(nominal):
         if value < 0.0 or (value == 0.0 and not allow_zero):
@@ -262,22 +269,6 @@ def _expansion(measurement: Measurement, problems: list[Problem]) -> tuple[float
     )
     remedy = "give density_prepared and density_run"
     return 1.0, [Finding("no-expansion-correction", "caution", text, remedy, measurement.name)]
-
-
-def group_flasks(c: Array, readings: Array) -> Flasks:
-    """Group ``readings`` by equal concentration: rows of one flask share its concentration error.
-
-    Examples
-    --------
-    >>> flasks = group_flasks(np.array([1.0, 2.0, 1.0]), np.array([4.0, 5.0, 6.0]))
-    >>> flasks.c.tolist(), flasks.mean.tolist(), flasks.within, flasks.within_dof
-    ([1.0, 2.0], [5.0, 5.0], 2.0, 1)
-    """
-    unique, index = np.unique(c, return_inverse=True)
-    count = np.bincount(index).astype(float)
-    mean = np.bincount(index, readings) / count
-    within = float(np.sum((readings - mean[index]) ** 2))
-    return Flasks(unique, mean, count, within, len(readings) - len(unique), index)
 
 
 def effect_derivatives(

@@ -81,7 +81,8 @@ def pair_of(
         float(entry["a"]),
         value_of(entry, "u_K") or 0.0,
         float(entry.get("u_a", 0.0)),
-        value_of(entry, "M_ref") or (math.sqrt(m_range[0] * m_range[1]) if m_range else _DEFAULT_REFERENCE),
+        value_of(entry, "M_ref")
+        or (math.sqrt(m_range[0] * m_range[1]) if m_range else _DEFAULT_REFERENCE),
         calibrated_on,
         float(entry.get("calibration_dispersity", 1.0)),
         str(entry.get("source", "source not stated")),
@@ -109,7 +110,7 @@ def _assembled(
         exponent = f"{head}_mark_houwink_a"
         own.append(Effect(exponent, "mark_houwink_a", constants.u_a, constants.source))
     u_K = math.hypot(*(effects[key].u for key in named)) if named else constants.u_K
-    findings = _findings(measurement, constants, u_K)
+    findings = _findings(measurement, u_K)
     assumptions, listed = _listed(constants)
     return Pair(
         constants,
@@ -124,9 +125,7 @@ def _assembled(
     )
 
 
-def _findings(
-    measurement: Measurement, constants: MarkHouwink, u_K: float
-) -> tuple[Finding, ...]:
+def _findings(measurement: Measurement, u_K: float) -> tuple[Finding, ...]:
     entry = measurement.fields["mark_houwink"]
     found = []
     if u_K == 0.0:
@@ -143,9 +142,9 @@ def _findings(
     elsewhere = []
     if solvent is not None and solvent.casefold() != (measurement.solvent or "").casefold():
         elsewhere.append(f"in {solvent}")
-    if temperature is not None and measurement.temperature is not None:
-        if abs(temperature - measurement.temperature) > 2.0:
-            elsewhere.append(f"at {temperature - 273.15:.4g} °C")
+    run = measurement.temperature
+    if temperature is not None and run is not None and abs(temperature - run) > 2.0:
+        elsewhere.append(f"at {temperature - 273.15:.4g} °C")
     if elsewhere:
         found.append(
             Finding(
@@ -179,8 +178,8 @@ def _listed(constants: MarkHouwink) -> tuple[tuple[str, ...], tuple[Constant, ..
     ]
     text = (
         f"constants calibrated on {constants.calibrated_on} at Đ ="
-        f" {constants.calibration_dispersity:g}: the joint estimate converts them to uniform chains;"
-        " Mv here takes them as entered"
+        f" {constants.calibration_dispersity:g}: the joint estimate converts them to uniform"
+        " chains; Mv here takes them as entered"
     )
     return (text,), tuple(listed)
 
@@ -225,6 +224,4 @@ def range_finding(pair: Pair, mass: Any, name: str) -> tuple[Finding, ...]:
         f"Mv of {mass / 1e3:.3g} kg/mol is outside the {low / 1e3:g} to {high / 1e3:g} kg/mol in"
         " which the Mark-Houwink pair was fitted"
     )
-    return (
-        Finding("outside-constants-range", "warning", text, "use a pair fitted there", name),
-    )
+    return (Finding("outside-constants-range", "warning", text, "use a pair fitted there", name),)

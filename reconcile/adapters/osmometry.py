@@ -11,17 +11,17 @@ import numpy as np
 from reconcile.adapters.common import (
     GAS_CONSTANT,
     Adapter,
-    Flasks,
-    Scatter,
     check_columns,
     effect_derivatives,
-    group_flasks,
     medium_of,
     power_quantity,
     raise_problems,
+    scatter_finding,
     solutions,
+    table_of,
     value_of,
 )
+from reconcile.adapters.flask_fit import FlaskFit, Prior, ReadingError, fit_flasks, group_flasks
 from reconcile.evidence import (
     Alternative,
     Constant,
@@ -34,7 +34,6 @@ from reconcile.evidence import (
 )
 from reconcile.linalg import least_squares
 from reconcile.measurement import ColumnSpec, Effect
-from reconcile.nonlinear import fit
 from reconcile.observables import inverse_average
 
 if TYPE_CHECKING:
@@ -42,8 +41,9 @@ if TYPE_CHECKING:
 
     from numpy.typing import NDArray
 
+    from reconcile.adapters.flask_fit import Model
     from reconcile.errors import Problem
-    from reconcile.measurement import Measurement, Sample, Table
+    from reconcile.measurement import Measurement, Sample
 
     Array = NDArray[np.float64]
 
@@ -59,6 +59,9 @@ STANDARD_GRAVITY = 9.80665
 VIRIAL_RATIO_PRIOR = (0.25, 0.2)
 """Mean and sd of g = A₃/(A₂² Mn); theory and experiment in good solvents span 0 to 0.5."""
 
+_LOWEST_INTERCEPT = 1e-3
+"""Lower bound of 1/Mn over its first guess: the third virial term divides by it."""
+
 _G_PER_CM3 = 1e3  # kg/m³
 _CM = 1e-2  # m
 
@@ -67,7 +70,7 @@ _CM = 1e-2  # m
 class Series:
     """A checked series: c in g/mL and π in Pa per reading, RT in J/mol · 1e6 (Pa mL/mol).
 
-    ``u_reading`` is absolute in Pa, or relative where ``is_relative``; None if none was stated.
+    ``error`` in Pa.
     """
 
     name: str
@@ -75,8 +78,7 @@ class Series:
     rt: float
     c: Array
     pi: Array
-    u_reading: float | None
-    is_relative: bool
+    error: ReadingError
     u_flask: float
     effects: Mapping[str, Effect]
     named: tuple[str, ...]
@@ -96,10 +98,10 @@ def prepare(measurement: Measurement, sample: Sample, effects: Mapping[str, Effe
     """
     problems = check_columns(measurement, [("head", "pi")])
     raise_problems(problems)
-    table = _table(measurement)
+    table = table_of(measurement)
     solution = solutions(measurement, sample, problems, allow_zero=False)
     weight, constants = _specific_weight(measurement, problems)
-    u_reading, is_relative = _reading_error(measurement, weight, problems)
+    error = _reading_error(measurement, weight, problems)
     n_flasks = len(np.unique(solution.c))
     if n_flasks < 2:
         problems.append(
@@ -119,8 +121,7 @@ def prepare(measurement: Measurement, sample: Sample, effects: Mapping[str, Effe
         GAS_CONSTANT * measurement.temperature * 1e6,
         solution.c,
         pi,
-        u_reading,
-        is_relative,
+        error,
         value_of(measurement.fields, "u_concentration") or 0.0,
         everything,
         (*measurement.effects, *(effect.id for effect in solution.effects)),
@@ -131,11 +132,6 @@ def prepare(measurement: Measurement, sample: Sample, effects: Mapping[str, Effe
     )
 
 
-def _table(measurement: Measurement) -> Table:
-    assert measurement.table is not None  # noqa: S101 - check_columns came first
-    return measurement.table
-
-
 def _specific_weight(
     measurement: Measurement, problems: list[Problem]
 ) -> tuple[float, tuple[Constant, ...]]:
@@ -144,7 +140,7 @@ def _specific_weight(
     gravity = value_of(measurement.fields, "gravity")
     listed = [Constant("R", GAS_CONSTANT, "J/(mol K)", "CODATA 2018, exact by the SI", "computed")]
     if density is None:
-        if "head" in _table(measurement).columns:
+        if "head" in table_of(measurement).columns:
             problems.append(
                 measurement.place.problem(
                     "liquid_density",
@@ -164,139 +160,76 @@ def _specific_weight(
 
 def _reading_error(
     measurement: Measurement, weight: float, problems: list[Problem]
-) -> tuple[float | None, bool]:
+) -> ReadingError:
     entry = measurement.fields.get("u_reading")
     if entry is None:
-        return None, False
+        return ReadingError(None)
     if entry.kind == "ratio":
-        return entry.value, True
+        return ReadingError(entry.value, is_relative=True)
     if entry.kind == "length":
         if weight == 0.0:
             problems.append(
                 measurement.place.problem(
-                    "u_reading", f'"{entry.text}" is a length, and liquid_density is not given',
+                    "u_reading",
+                    f'"{entry.text}" is a length, and liquid_density is not given',
                     "state it as a pressure, or give liquid_density",
                 )
             )
-        return entry.value * weight, False
-    return entry.value, False
+        return ReadingError(entry.value * weight)
+    return ReadingError(entry.value)
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class _Virial:
-    """The default fit: (1/Mn, A2, g) with covariance, and what the scatter said."""
+def _virial(rt: float) -> Model:
+    """Return the model π = RT c (I + A₂c + g A₂²c²/I) in Pa, parameters (I = 1/Mn, A₂, g)."""
 
-    values: Array
-    covariance: Array
-    scatter: Scatter
-    has_intercept: bool
+    def model(values: Array, c: Array) -> tuple[Array, Array, Array]:
+        i, a2, g = values
+        square = (a2 * c) ** 2 / i
+        pi = rt * c * (i + a2 * c + g * square)
+        columns = [1.0 - g * square / i, c + 2.0 * g * a2 * c**2 / i, square]
+        by_c = rt * c * (i + 2.0 * a2 * c + 3.0 * g * square)
+        return pi, rt * c[:, None] * np.column_stack(columns), by_c
 
-
-def _pressure(rt: float, values: Array, c: Array) -> Array:
-    """Return π = RT c (I + A₂c + g A₂²c²/I) in Pa, I = 1/Mn."""
-    i, a2, g = values
-    return np.asarray(rt * c * (i + a2 * c + g * (a2 * c) ** 2 / i))
+    return model
 
 
-def _pressure_slopes(rt: float, values: Array, c: Array) -> tuple[Array, Array]:
-    """Return ∂π/∂(I, A₂, g), shape (k, 3), and ∂π/∂ ln c."""
-    i, a2, g = values
-    square = (a2 * c) ** 2 / i
-    columns = [1.0 - g * square / i, c + 2.0 * g * a2 * c**2 / i, square]
-    by_c = rt * c * (i + 2.0 * a2 * c + 3.0 * g * square)
-    return rt * c[:, None] * np.column_stack(columns), by_c
-
-
-def _fit_virial(series: Series, flasks: Flasks) -> _Virial:
-    """Fit pressures by flask with g under its prior, marginalised by its place in the covariance.
-
-    Notes
-    -----
-    The error of a flask's concentration moves c and π together, so it enters as
-    u(π) = u_c ∂π/∂ ln c at the fitted line. The scatter multiplies the readings' part of the
-    covariance, never the prior's.
-    """
-    line = least_squares(
-        np.column_stack([np.ones_like(flasks.c), flasks.c]),
-        flasks.mean / (series.rt * flasks.c),
-        1.0 / flasks.c,
-    ).coefficients
-    start_i = line[0] if line[0] > 0.0 else float(np.min(flasks.mean / (series.rt * flasks.c)))
-    values = np.array([start_i, line[1], VIRIAL_RATIO_PRIOR[0]])
-    scale2, bound = 1.0, False
-    for _ in range(3):
-        sd = _flask_sd(series, flasks, values)
-        found = _solve(series, flasks, values, sd * math.sqrt(scale2))
-        values, bound = found[0], found[2]
-        sd = _flask_sd(series, flasks, values)
-        misfit = (flasks.mean - _pressure(series.rt, values, flasks.c)) / sd
-        chi2 = float(misfit @ misfit) + _within(series, flasks)
-        dof = len(flasks.c) - 2 + flasks.within_dof
-        scatter = Scatter.of(chi2, dof, stated=series.u_reading is not None)
-        if not math.isfinite(scatter.scale2):
-            break
-        scale2 = max(scatter.scale2, 1e-20)
-    if not math.isfinite(scatter.scale2):
-        return _Virial(values, np.full((3, 3), np.nan), scatter, not bound)
-    return _Virial(values, found[1], scatter, not bound)
-
-
-def _unit_error(series: Series, flasks: Flasks) -> Array:
-    """Return the error of one reading in Pa per flask; the mean pressure where none was stated."""
-    if series.u_reading is None:
-        # only ratios of weights matter: a constant absolute error
-        return np.full_like(flasks.c, float(np.mean(np.abs(flasks.mean))))
-    if series.is_relative:
-        return np.abs(flasks.mean) * series.u_reading
-    return np.full_like(flasks.c, series.u_reading)
-
-
-def _within(series: Series, flasks: Flasks) -> float:
-    unit = _unit_error(series, flasks)
-    return float(np.sum(((series.pi - flasks.mean[flasks.index]) / unit[flasks.index]) ** 2))
-
-
-def _flask_sd(series: Series, flasks: Flasks, values: Array) -> Array:
-    _, by_c = _pressure_slopes(series.rt, values, flasks.c)
-    reading = _unit_error(series, flasks) / np.sqrt(flasks.count)
-    return np.asarray(np.hypot(reading, series.u_flask * by_c))
-
-
-def _solve(
-    series: Series, flasks: Flasks, start: Array, sd: Array
-) -> tuple[Array, Array, bool]:
-    """Return (I, A₂, g), their covariance, and whether I ended on its bound."""
-    scale = np.array([start[0], max(abs(start[1]), start[0] / flasks.c[-1]), 1.0])
+def _fit(series: Series) -> FlaskFit:
+    """Fit (1/Mn, A₂, g), g marginalised by its place in the covariance."""
+    flasks = group_flasks(series.c, series.pi, series.error)
+    y = flasks.mean / (series.rt * flasks.c)
+    design = np.column_stack([np.ones_like(y), flasks.c])
+    intercept, slope = least_squares(design, y, 1.0 / flasks.c).coefficients
+    if intercept <= 0.0:
+        # a noisy line through zero: start from the lowest reading instead
+        intercept = max(float(y.min()), 1e-3 * abs(slope) * float(flasks.c[-1]))
+    floor = 1e-3 * intercept / float(flasks.c[-1])
     centre, width = VIRIAL_RATIO_PRIOR
-
-    def residual(p: Array) -> Array:
-        values = p * scale
-        misfit = (_pressure(series.rt, values, flasks.c) - flasks.mean) / sd
-        return np.append(misfit, (values[2] - centre) / width)
-
-    def jacobian(p: Array) -> Array:
-        slopes, _ = _pressure_slopes(series.rt, p * scale, flasks.c)
-        prior = np.array([0.0, 0.0, 1.0 / width])
-        return np.vstack([slopes / sd[:, None], prior]) * scale
-
-    lower = np.array([1e-3, -np.inf, -np.inf])
-    found = fit(residual, jacobian, start / scale, lower)
-    return found.values * scale, found.covariance * np.outer(scale, scale), found.at_bound[0]
+    start = np.array([intercept, slope if abs(slope) > floor else floor, centre])
+    return fit_flasks(
+        flasks,
+        series.error,
+        series.u_flask,
+        _virial(series.rt),
+        start,
+        [Prior(2, centre, width)],
+        lower=_LOWEST_INTERCEPT,
+    )
 
 
 def reduce(series: Series) -> Reduction:
     """Return Mn and A2 with their evidence, alternatives and findings."""
-    flasks = group_flasks(series.c, series.pi)
-    virial = _fit_virial(series, flasks)
+    virial = _fit(series)
     rows = _rows(series, virial)
     quantities = _quantities(series, virial, rows)
     alternatives = _alternatives(series)
-    findings = _findings(series, flasks, virial, quantities, alternatives)
-    known = bool(np.isfinite(virial.covariance).all())
+    findings = _findings(series, virial, alternatives)
     evidence = None
-    if known:
+    if virial.is_known:
         evidence = Evidence(
-            series.name, rows, frozen_array(virial.values[:2]), frozen_array(virial.covariance[:2, :2])
+            series.name,
+            rows,
+            frozen_array(virial.values[:2]),
+            frozen_array(virial.covariance[:2, :2]),
         )
     return Reduction(
         series.name,
@@ -307,7 +240,7 @@ def reduce(series: Series) -> Reduction:
         alternatives,
         (*series.findings, *findings),
         (),
-        _readings(series, flasks, virial),
+        _readings(series, virial),
         _fit_summary(series, virial),
         series.constants,
         series.assumptions,
@@ -315,7 +248,7 @@ def reduce(series: Series) -> Reduction:
     )
 
 
-def _rows(series: Series, virial: _Virial) -> tuple[Row, ...]:
+def _rows(series: Series, virial: FlaskFit) -> tuple[Row, ...]:
     nu = virial.scatter.dof
     # I and A2 both scale as π/(RT); I falls with c, A2 with c²
     inverse = {"concentration": -1.0, "pressure": 1.0, "temperature": -1.0}
@@ -336,10 +269,10 @@ _UNKNOWN = "no reading error was stated and there is no scatter to learn it from
 
 
 def _quantities(
-    series: Series, virial: _Virial, rows: tuple[Row, ...]
+    series: Series, virial: FlaskFit, rows: tuple[Row, ...]
 ) -> dict[str, QuantityValue]:
     i, a2, g = (float(x) for x in virial.values)
-    if not np.isfinite(virial.covariance).all():
+    if not virial.is_known:
         return {
             "Mn": QuantityValue(1.0 / i, "g/mol", why=_UNKNOWN),
             "A2": QuantityValue(a2, "mol mL/g²", why=_UNKNOWN),
@@ -415,72 +348,58 @@ def _from_line(
 
 
 def _findings(
-    series: Series,
-    flasks: Flasks,
-    virial: _Virial,
-    quantities: Mapping[str, QuantityValue],
-    alternatives: tuple[Alternative, ...],
+    series: Series, virial: FlaskFit, alternatives: tuple[Alternative, ...]
 ) -> list[Finding]:
-    found: list[Finding] = []
+    found = list(scatter_finding(series.name, virial.scatter, "look for drift, leaks, a bad flask"))
 
     def add(code: str, severity: str, text: str, remedy: str) -> None:
         found.append(Finding(code, severity, text, remedy, series.name))
 
-    scatter = virial.scatter
-    if series.u_reading is None:
-        text = "no reading error was stated: the scatter of the readings sets the scale"
-        add("no-stated-error", "note", text, "state u_reading, from repeated zero readings")
-    elif scatter.p_value < 0.01:
-        text = (
-            f"readings scatter {math.sqrt(scatter.ratio):.2g} times as much as stated"
-            f" (p = {scatter.p_value:.1g})"
-        )
-        add("scatter-exceeds-stated", "warning", text, "look for drift, a leak, or a bad flask")
-    if not virial.has_intercept:
+    if virial.at_bound:
         text = "the ordinate intercept is not positive: Mn is beyond what these readings resolve"
         add("no-intercept", "warning", text, "more concentrated solutions, or another method")
-    top = float(virial.values[1] / virial.values[0] * flasks.c[-1])
+    reach = abs(float(virial.values[1] / virial.values[0]))
+    top = reach * float(series.c.max())
     if top > 1.0:
         text = f"A2·Mn·c reaches {top:.2g}; terms beyond the third virial one matter there"
         add("concentrations-too-high", "warning", text, "measure lower concentrations")
-    if len(flasks.c) < 4:
-        text = f"{len(flasks.c)} concentrations leave little to check the extrapolation with"
+    n_flasks = len(np.unique(series.c))
+    if n_flasks < 4:
+        text = f"{n_flasks} concentrations leave little to check the extrapolation with"
         add("few-concentrations", "caution", text, "measure at least four")
-    _form_finding(alternatives, flasks, virial, add)
-    return found
-
-
-def _form_finding(
-    alternatives: tuple[Alternative, ...], flasks: Flasks, virial: _Virial, add: Any
-) -> None:
     by_form = {a.form: a.quantities["Mn"] for a in alternatives}
     line = by_form["straight line, equal weights"]
     root = by_form.get("square root, equal weights")
-    if root is None or not (line.value and root.value and line.u and root.u):
-        return
-    gap = abs(math.log(line.value / root.value))
-    if gap > 2.0 * math.hypot(line.u / line.value, root.u / root.value):
-        reach = 0.15 * virial.values[0] / max(abs(virial.values[1]), 1e-30)
-        low = f"{1e3 * min(reach, flasks.c[-1]):.2g} g/L"
-        text = f"straight and square-root lines differ by {100 * gap:.2g} % in Mn, over their errors"
-        add("forms-differ", "warning", text, f"concentrations up to {low} would settle it")
+    if root is not None and line.value and root.value and line.u and root.u:
+        gap = abs(math.log(line.value / root.value))
+        if gap > 2.0 * math.hypot(line.u / line.value, root.u / root.value):
+            low = 1e3 * min(0.15 / max(reach, 1e-30), float(series.c.max()))
+            text = (
+                f"straight and square-root lines differ by {100 * gap:.2g} % in Mn, beyond errors"
+            )
+            add(
+                "forms-differ",
+                "warning",
+                text,
+                f"concentrations up to {low:.2g} g/L would settle it",
+            )
+    return found
 
 
-def _readings(series: Series, flasks: Flasks, virial: _Virial) -> dict[str, tuple[float, ...]]:
-    fitted = _pressure(series.rt, virial.values, series.c)
+def _readings(series: Series, virial: FlaskFit) -> dict[str, tuple[float, ...]]:
+    fitted, _, _ = _virial(series.rt)(virial.values, series.c)
     # the plot's ordinate in mol/kg, so that 1/Mn in mol/g is not lost in zeros
+    ordinate = 1e3 / (series.rt * series.c)
     return {
         "c [g/L]": tuple((1e3 * series.c).tolist()),
         "pi [Pa]": tuple(series.pi.tolist()),
         "fitted pi [Pa]": tuple(fitted.tolist()),
-        "pi/(cRT) [mol/kg]": tuple((1e3 * series.pi / (series.rt * series.c)).tolist()),
-        "u of one reading [Pa]": tuple(
-            [None if series.u_reading is None else float(x) for x in _unit_error(series, flasks)[flasks.index]]
-        ),
+        "pi/(cRT) [mol/kg]": tuple((ordinate * series.pi).tolist()),
+        "fitted pi/(cRT) [mol/kg]": tuple((ordinate * fitted).tolist()),
     }
 
 
-def _fit_summary(series: Series, virial: _Virial) -> dict[str, Any]:
+def _fit_summary(series: Series, virial: FlaskFit) -> dict[str, Any]:
     i, a2, g = (float(x) for x in virial.values)
     grid = np.linspace(0.0, float(series.c.max()), 41)
     curve = i + a2 * grid + g * (a2 * grid) ** 2 / i
@@ -488,7 +407,7 @@ def _fit_summary(series: Series, virial: _Virial) -> dict[str, Any]:
         "1/Mn [mol/g]": i,
         "A2 [mol mL/g²]": a2,
         "third virial ratio g": g,
-        "scatter over stated": math.sqrt(virial.scatter.scale2) if virial.scatter.scale2 >= 0 else None,
+        "scatter over stated": math.sqrt(virial.scatter.scale2) if virial.is_known else None,
         "dof": virial.scatter.dof,
         "curve c [g/L]": (1e3 * grid).tolist(),
         "curve pi/(cRT) [mol/kg]": (1e3 * curve).tolist(),

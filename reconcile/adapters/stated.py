@@ -57,6 +57,12 @@ _FORMS: Mapping[str, _Form] = {
 }
 
 
+_PLAIN: Mapping[str, Observable] = {
+    **{name: inverse_average(name) for name in ("Mn", "Mw", "Mz")},
+    "dispersity": dispersity(),
+}
+
+
 @dataclass(frozen=True, slots=True, eq=False)
 class StatedValue:
     """A checked stated quantity: value in internal units, u relative."""
@@ -138,10 +144,8 @@ def _link(
     measurement: Measurement, quantity: str, pair: Pair | None
 ) -> tuple[Observable | None, dict[str, float], tuple[Effect, ...]]:
     """Return what the row observes, its derivatives by constants, and the effects those bring."""
-    if quantity in {"Mn", "Mw", "Mz"}:
-        return inverse_average(quantity), {}, ()
-    if quantity == "dispersity":
-        return dispersity(), {}, ()
+    if quantity in _PLAIN:
+        return _PLAIN[quantity], {}, ()
     if quantity == "Mv":
         return viscosity_average(float(measurement.fields["exponent"])), {}, ()
     if quantity == "limiting_viscosity_number" and pair is not None:
@@ -175,7 +179,12 @@ def reduce(series: StatedValue) -> Reduction:
         quantities["Mv"] = molar_mass(series.pair, value)
         findings += range_finding(series.pair, quantities["Mv"].value, series.name)
     row = Row(
-        series.quantity, series.observable, form.scale, series.dof, series.derivatives, series.medium
+        series.quantity,
+        series.observable,
+        form.scale,
+        series.dof,
+        series.derivatives,
+        series.medium,
     )
     return Reduction(
         series.name,

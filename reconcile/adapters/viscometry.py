@@ -10,17 +10,17 @@ import numpy as np
 
 from reconcile.adapters.common import (
     Adapter,
-    Flasks,
-    Scatter,
     check_columns,
     effect_derivatives,
-    group_flasks,
     medium_of,
     power_quantity,
     raise_problems,
+    scatter_finding,
     solutions,
+    table_of,
     value_of,
 )
+from reconcile.adapters.flask_fit import FlaskFit, Prior, ReadingError, fit_flasks, group_flasks
 from reconcile.adapters.mark_houwink import Pair, molar_mass, pair_of, range_finding
 from reconcile.evidence import (
     Alternative,
@@ -33,7 +33,6 @@ from reconcile.evidence import (
 )
 from reconcile.linalg import least_squares
 from reconcile.measurement import ColumnSpec, Effect
-from reconcile.nonlinear import fit
 
 if TYPE_CHECKING:
     from collections.abc import Mapping
@@ -41,7 +40,7 @@ if TYPE_CHECKING:
     from numpy.typing import NDArray
 
     from reconcile.errors import Problem
-    from reconcile.measurement import Measurement, Sample, Table
+    from reconcile.measurement import Measurement, Sample
 
     Array = NDArray[np.float64]
 
@@ -56,7 +55,7 @@ COLUMNS: dict[str, ColumnSpec] = {
 _READINGS = ("t", "eta_r", "eta")
 
 CUBIC_PRIOR = (0.5, 0.5)
-"""Mean and sd of κ in k₃ = κ k_H²: 0 for a Huggins series, ½ for Martin's, 1 for Schulz-Blaschke's."""
+"""Mean and sd of κ in k₃ = κ k_H²: 0 for Huggins, ½ for Martin, 1 for Schulz-Blaschke series."""
 
 HUGGINS_PRIOR = (0.40, 0.20)
 """Mean and sd of k_H where fewer than three concentrations cannot show it."""
@@ -69,7 +68,6 @@ class Series:
     """A checked series: concentrations in g/mL and readings; relative viscosities have no solvent.
 
     ``y`` is a flow time in s, a viscosity in Pa s, or η_r; ``solvent`` its readings at c = 0.
-    ``u_reading`` is absolute, or relative where ``is_relative``.
     """
 
     name: str
@@ -78,8 +76,7 @@ class Series:
     c: Array
     y: Array
     solvent: Array
-    u_reading: float | None
-    is_relative: bool
+    error: ReadingError
     u_flask: float
     effects: Mapping[str, Effect]
     named: tuple[str, ...]
@@ -99,7 +96,7 @@ def prepare(measurement: Measurement, sample: Sample, effects: Mapping[str, Effe
     """
     problems = check_columns(measurement, [_READINGS])
     raise_problems(problems)
-    table = _table(measurement)
+    table = table_of(measurement)
     quantity = next(key for key in _READINGS if key in table.columns)
     solution = solutions(measurement, sample, problems, allow_zero=True)
     y = table.columns[quantity]
@@ -116,8 +113,9 @@ def prepare(measurement: Measurement, sample: Sample, effects: Mapping[str, Effe
         solution.c[~is_solvent],
         y[~is_solvent],
         y[is_solvent] if quantity != "eta_r" else np.empty(0),
-        None if u_reading is None else u_reading.value,
-        u_reading is not None and u_reading.kind == "ratio",
+        ReadingError(None)
+        if u_reading is None
+        else ReadingError(u_reading.value, is_relative=u_reading.kind == "ratio"),
         value_of(measurement.fields, "u_concentration") or 0.0,
         {**effects, **{effect.id: effect for effect in own}},
         (*measurement.effects, *(effect.id for effect in solution.effects)),
@@ -128,13 +126,8 @@ def prepare(measurement: Measurement, sample: Sample, effects: Mapping[str, Effe
     )
 
 
-def _table(measurement: Measurement) -> Table:
-    assert measurement.table is not None  # noqa: S101 - check_columns came first
-    return measurement.table
-
-
 def _check_readings(measurement: Measurement, quantity: str, problems: list[Problem]) -> None:
-    table = _table(measurement)
+    table = table_of(measurement)
     c, y = table.columns["c"], table.columns[quantity]
     for row in np.flatnonzero(y <= 0.0):
         found = f"found {y[row]:g}, expected more than 0"
@@ -163,150 +156,51 @@ def _check_readings(measurement: Measurement, quantity: str, problems: list[Prob
         problems.append(measurement.place.problem("u_reading", found))
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class _Curve:
-    """The default fit: (y₀, [η], k_H, κ) with covariance, and what the scatter said."""
-
-    values: Array
-    covariance: Array
-    scatter: Scatter
-
-    @property
-    def is_known(self) -> bool:
-        """Whether there is an uncertainty."""
-        return bool(np.isfinite(self.covariance).all())
-
-
-def _relative_viscosity(values: Array, c: Array) -> Array:
-    """Return η_r = 1 + x + k_H x² + κ k_H² x³, x = [η]c."""
-    _, eta, huggins, kappa = values
-    x = eta * c
-    return np.asarray(1.0 + x + huggins * x**2 + kappa * huggins**2 * x**3)
-
-
-def _slopes(values: Array, c: Array) -> tuple[Array, Array]:
-    """Return ∂y/∂(y₀, [η], k_H, κ), shape (k, 4), and ∂y/∂ ln c."""
+def _model(values: Array, c: Array) -> tuple[Array, Array, Array]:
+    """Return y = y₀(1 + x + k_H x² + κ k_H² x³), x = [η]c; parameters (y₀, [η], k_H, κ)."""
     y0, eta, huggins, kappa = values
     x = eta * c
     cubic = kappa * huggins**2
+    ratio = 1.0 + x + huggins * x**2 + cubic * x**3
     by_x = 1.0 + 2.0 * huggins * x + 3.0 * cubic * x**2
     columns = [
-        _relative_viscosity(values, c),
+        ratio,
         y0 * by_x * c,
         y0 * (x**2 + 2.0 * kappa * huggins * x**3),
         y0 * huggins**2 * x**3,
     ]
-    return np.column_stack(columns), y0 * by_x * x
+    return y0 * ratio, np.column_stack(columns), y0 * by_x * x
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class _Data:
-    """Means per flask with the solvent first; relative viscosities have a solvent of 1, exactly."""
-
-    c: Array
-    mean: Array
-    count: Array
-    within: float
-    within_dof: int
-    has_solvent: bool
-
-
-def _data(series: Series) -> _Data:
-    flasks = group_flasks(series.c, series.y)
-    within, within_dof = _within(series, flasks)
-    if series.quantity == "eta_r":
-        return _Data(flasks.c, flasks.mean, flasks.count, within, within_dof, has_solvent=False)
-    solvent = series.solvent
-    unit = _unit_error(series, np.array([solvent.mean()]))[0]
-    within += float(np.sum(((solvent - solvent.mean()) / unit) ** 2))
-    return _Data(
-        np.concatenate([[0.0], flasks.c]),
-        np.concatenate([[solvent.mean()], flasks.mean]),
-        np.concatenate([[float(len(solvent))], flasks.count]),
-        within,
-        within_dof + len(solvent) - 1,
-        has_solvent=True,
+def _fit(series: Series) -> FlaskFit:
+    """Fit the readings themselves, the solvent's among them; relative viscosities start at 1."""
+    has_solvent = len(series.solvent) > 0
+    flasks = group_flasks(
+        np.concatenate([np.zeros_like(series.solvent), series.c]),
+        np.concatenate([series.solvent, series.y]),
+        series.error,
     )
-
-
-def _unit_error(series: Series, mean: Array) -> Array:
-    """Return the error of one reading; without a stated one only its constancy matters."""
-    if series.u_reading is None:
-        return np.full_like(mean, 0.01 * float(np.mean(series.y)))
-    return mean * series.u_reading if series.is_relative else np.full_like(mean, series.u_reading)
-
-
-def _within(series: Series, flasks: Flasks) -> tuple[float, int]:
-    unit = _unit_error(series, flasks.mean)[flasks.index]
-    return float(np.sum(((series.y - flasks.mean[flasks.index]) / unit) ** 2)), flasks.within_dof
-
-
-def _fit_curve(series: Series, data: _Data) -> _Curve:
-    """Fit the readings themselves, the solvent's among them.
-
-    Notes
-    -----
-    As for osmotic pressures: a flask's concentration error enters as u_c ∂y/∂ ln c, the scatter
-    multiplies the readings' part of the covariance and no prior's.
-    """
-    y0 = data.mean[0] if data.has_solvent else 1.0
-    solved = data.c > 0.0
-    eta = float(np.median((data.mean[solved] / y0 - 1.0) / data.c[solved]))
-    values = np.array([y0, max(eta, 1e-3), HUGGINS_PRIOR[0], CUBIC_PRIOR[0]])
-    few = int(solved.sum()) < 3
-    dof = len(data.c) - (1 if data.has_solvent else 0) - (1 if few else 2) + data.within_dof
-    scale2 = 1.0
-    for _ in range(3):
-        sd = _flask_sd(series, data, values)
-        values, covariance = _solve(data, values, sd * math.sqrt(scale2), few=few)
-        sd = _flask_sd(series, data, values)
-        misfit = (data.mean - values[0] * _relative_viscosity(values, data.c)) / sd
-        scatter = Scatter.of(
-            float(misfit @ misfit) + data.within, dof, stated=series.u_reading is not None
-        )
-        if not math.isfinite(scatter.scale2):
-            break
-        scale2 = max(scatter.scale2, 1e-20)
-    if not math.isfinite(scatter.scale2):
-        covariance = np.full((4, 4), np.nan)
-    return _Curve(values, covariance, scatter)
-
-
-def _flask_sd(series: Series, data: _Data, values: Array) -> Array:
-    _, by_c = _slopes(values, data.c)
-    reading = _unit_error(series, data.mean) / np.sqrt(data.count)
-    return np.asarray(np.hypot(reading, series.u_flask * by_c))
-
-
-def _solve(data: _Data, start: Array, sd: Array, *, few: bool) -> tuple[Array, Array]:
-    """Return (y₀, [η], k_H, κ) and their covariance; y₀ is held at 1 for relative viscosities."""
-    scale = np.array([start[0], start[1], 1.0, 1.0])
-    priors = [(3, *CUBIC_PRIOR)] + ([(2, *HUGGINS_PRIOR)] if few else [])
-    free = slice(0 if data.has_solvent else 1, 4)
-
-    def complete(p: Array) -> Array:
-        return np.concatenate([[1.0], p]) if not data.has_solvent else p
-
-    def residual(p: Array) -> Array:
-        values = complete(p) * scale
-        misfit = (values[0] * _relative_viscosity(values, data.c) - data.mean) / sd
-        return np.append(misfit, [(values[k] - m) / s for k, m, s in priors])
-
-    def jacobian(p: Array) -> Array:
-        slopes, _ = _slopes(complete(p) * scale, data.c)
-        rows = [np.eye(4)[k] / s for k, _, s in priors]
-        return (np.vstack([slopes / sd[:, None], rows]) * scale)[:, free]
-
-    found = fit(residual, jacobian, (start / scale)[free])
-    covariance = np.zeros((4, 4))
-    covariance[free, free] = found.covariance
-    return complete(found.values) * scale, covariance * np.outer(scale, scale)
+    y0 = float(series.solvent.mean()) if has_solvent else 1.0
+    solved = flasks.c > 0.0
+    eta = float(np.median((flasks.mean[solved] / y0 - 1.0) / flasks.c[solved]))
+    priors = [Prior(3, *CUBIC_PRIOR)]
+    if int(solved.sum()) < 3:
+        priors.append(Prior(2, *HUGGINS_PRIOR))
+    start = np.array([y0, max(eta, 1e-3), HUGGINS_PRIOR[0], CUBIC_PRIOR[0]])
+    return fit_flasks(
+        flasks,
+        series.error,
+        series.u_flask,
+        _model,
+        start,
+        priors,
+        fixed=0 if has_solvent else 1,
+    )
 
 
 def reduce(series: Series) -> Reduction:
     """Return [η], the Huggins constant and Mv with evidence, alternatives and findings."""
-    data = _data(series)
-    curve = _fit_curve(series, data)
+    curve = _fit(series)
     derivatives = effect_derivatives(series.effects, series.named, {"concentration": -1.0})
     pair = series.pair
     own = math.hypot(*(d * series.effects[k].u for k, d in derivatives.items()), 0.0)
@@ -320,7 +214,7 @@ def reduce(series: Series) -> Reduction:
     )
     quantities = _quantities(curve, pair, own)
     alternatives = _alternatives(series)
-    findings = [*series.findings, *_findings(series, data, curve, quantities, alternatives)]
+    findings = [*series.findings, *_findings(series, curve, quantities, alternatives)]
     evidence = None
     if curve.is_known:
         evidence = Evidence(
@@ -346,7 +240,7 @@ def reduce(series: Series) -> Reduction:
     )
 
 
-def _quantities(curve: _Curve, pair: Pair | None, u_shared: float) -> dict[str, QuantityValue]:
+def _quantities(curve: FlaskFit, pair: Pair | None, u_shared: float) -> dict[str, QuantityValue]:
     _, eta, huggins, _ = (float(x) for x in curve.values)
     if curve.is_known:
         sd = np.sqrt(np.diag(curve.covariance))
@@ -427,47 +321,38 @@ def _single_point(series: Series, c: float, ratio: float) -> tuple[Alternative, 
 
 def _findings(
     series: Series,
-    data: _Data,
-    curve: _Curve,
+    curve: FlaskFit,
     quantities: Mapping[str, QuantityValue],
     alternatives: tuple[Alternative, ...],
 ) -> list[Finding]:
+    look_for = "look for dust, temperature, a bad flask"
     found: list[Finding] = []
+    if curve.is_known:
+        found += scatter_finding(series.name, curve.scatter, look_for)
 
     def add(code: str, severity: str, text: str, remedy: str) -> None:
         found.append(Finding(code, severity, text, remedy, series.name))
 
-    n_flasks = int((data.c > 0.0).sum())
+    n_flasks = len(np.unique(series.c))
     if not curve.is_known:
         text = f"{_UNKNOWN}: the numbers stand without uncertainty and stay out of the estimate"
         add("no-uncertainty", "warning", text, "state u_reading")
-    elif series.u_reading is None:
-        text = "no reading error was stated: the scatter of the readings sets the scale"
-        add("no-stated-error", "note", text, "state u_reading, from repeated timings")
-    elif curve.scatter.p_value < 0.01:
-        text = (
-            f"readings scatter {math.sqrt(curve.scatter.ratio):.2g} times as much as stated"
-            f" (p = {curve.scatter.p_value:.1g})"
-        )
-        add("scatter-exceeds-stated", "warning", text, "look for dust, temperature, a bad flask")
     if n_flasks < 3:
         text = (
             f"{n_flasks} concentration(s) cannot show the Huggins constant: it is taken as"
             f" {HUGGINS_PRIOR[0]:g} ± {HUGGINS_PRIOR[1]:g}"
         )
         add("few-concentrations", "caution", text, "measure at least four concentrations")
-    _window_findings(series, data, quantities, add)
+    _window_findings(series, quantities, add)
     _intercept_finding(alternatives, add)
     if series.pair is not None:
         found += range_finding(series.pair, quantities["Mv"].value, series.name)
     return found
 
 
-def _window_findings(
-    series: Series, data: _Data, quantities: Mapping[str, QuantityValue], add: Any
-) -> None:
-    y0 = data.mean[0] if data.has_solvent else 1.0
-    ratio = data.mean[data.c > 0.0] / y0
+def _window_findings(series: Series, quantities: Mapping[str, QuantityValue], add: Any) -> None:
+    y0 = float(series.solvent.mean()) if len(series.solvent) else 1.0
+    ratio = series.y / y0
     low, high = float(ratio.min()), float(ratio.max())
     if high > 2.0 or low < 1.1:
         text = f"relative viscosity runs from {low:.2f} to {high:.2f}; 1.2 to 2.0 is usual"
@@ -492,37 +377,42 @@ def _intercept_finding(alternatives: tuple[Alternative, ...], add: Any) -> None:
         return
     gap = abs(huggins.value / kraemer.value - 1.0)
     joint = 2.0 * math.hypot(huggins.u or 0.0, kraemer.u or 0.0) / kraemer.value
-    if gap > max(0.02, 0.0) or (joint > 0.0 and gap > max(joint, 0.005)):
+    if gap > 0.02 or (0.0 < joint < gap and gap > 0.005):
         text = (
             f"Huggins and Kraemer lines meet the axis {100 * gap:.2g} % apart"
             f" ({huggins.value:.4g} and {kraemer.value:.4g} mL/g)"
         )
-        add("intercepts-differ", "warning", text, "dilute until they meet; see the alternatives")
+        add(
+            "intercepts-differ",
+            "warning" if gap > 0.02 else "note",
+            text,
+            "dilute until they meet; see the alternatives",
+        )
 
 
-def _readings(series: Series, curve: _Curve) -> dict[str, tuple[float, ...]]:
+def _readings(series: Series, curve: FlaskFit) -> dict[str, tuple[float, ...]]:
     y0 = float(curve.values[0])
     ratio = series.y / y0
     heading = {"t": "t [s]", "eta": "viscosity [Pa s]", "eta_r": "eta_r [1]"}[series.quantity]
     return {
         "c [g/dL]": tuple((1e2 * series.c).tolist()),
         heading: tuple(series.y.tolist()),
-        f"fitted {heading}": tuple((y0 * _relative_viscosity(curve.values, series.c)).tolist()),
+        f"fitted {heading}": tuple(_model(curve.values, series.c)[0].tolist()),
         "(eta_r - 1)/c [mL/g]": tuple(((ratio - 1.0) / series.c).tolist()),
         "ln(eta_r)/c [mL/g]": tuple((np.log(ratio) / series.c).tolist()),
     }
 
 
-def _fit_summary(series: Series, curve: _Curve) -> dict[str, Any]:
+def _fit_summary(series: Series, curve: FlaskFit) -> dict[str, Any]:
     y0, eta, huggins, kappa = (float(x) for x in curve.values)
     grid = np.linspace(0.0, float(series.c.max()), 41)[1:]
-    ratio = _relative_viscosity(curve.values, grid)
+    ratio = _model(curve.values, grid)[0] / y0
     return {
         "solvent": y0,
         "[η] [mL/g]": eta,
         "k_H": huggins,
         "kappa, k3 over k_H squared": kappa,
-        "scatter over stated": math.sqrt(max(curve.scatter.scale2, 0.0)) if curve.is_known else None,
+        "scatter over stated": math.sqrt(curve.scatter.scale2) if curve.is_known else None,
         "dof": curve.scatter.dof,
         "curve c [g/dL]": (1e2 * grid).tolist(),
         "curve (eta_r - 1)/c [mL/g]": ((ratio - 1.0) / grid).tolist(),

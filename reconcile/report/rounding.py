@@ -36,21 +36,23 @@ def rounded(value: float, place: int) -> str:
     ('131.3', '3.46e-4', '1200')
     """
     value = round(value, place)
-    if value != 0.0 and (abs(value) < 1e-3 or abs(value) >= 1e6):
-        exponent = math.floor(math.log10(abs(value)))
+    exponent = _exponent(value, place)
+    if exponent:
         digits = max(place + exponent, 0)
         mantissa = f"{value / 10.0**exponent:.{digits}f}"
         return f"{mantissa}e{exponent}"
     return f"{value:.{max(place, 0)}f}"
 
 
-def value_text(value: float | None, u: float | None = None) -> str:
-    """Return value and uncertainty rounded together.
+def value_text(value: float | None, u: float | None = None, total: float | None = None) -> str:
+    """Return value and uncertainty rounded together, with a second uncertainty in brackets.
 
     Examples
     --------
     >>> value_text(131.278, 3.12), value_text(0.31234), value_text(None)
     ('131.3 ± 3.1', '0.3123', '–')
+    >>> value_text(3.904e-4, 2.8e-5, 2.9e-5)
+    '(3.90 ± 0.28 [± 0.29])e-4'
     """
     if value is None:
         return "–"
@@ -59,13 +61,24 @@ def value_text(value: float | None, u: float | None = None) -> str:
             return "0"
         return rounded(value, _PLAIN_DIGITS - 1 - math.floor(math.log10(abs(value))))
     place = place_of(u)
-    value_part, u_part = rounded(value, place), rounded(u, place)
-    if "e" in value_part:
-        exponent = int(value_part.split("e")[1])
-        factor = 10.0**-exponent
-        digits = max(place + exponent, 0)
-        return f"({value * factor:.{digits}f} ± {u * factor:.{digits}f})e{exponent}"
-    return f"{value_part} ± {u_part}"
+    exponent = _exponent(value, place)
+    factor, digits = 10.0**-exponent, max(place + exponent, 0)
+
+    def show(x: float) -> str:
+        return f"{round(x, place) * factor:.{digits}f}"
+
+    text = f"{show(value)} ± {show(u)}"
+    if total is not None:
+        text += f" [± {show(total)}]"
+    return f"({text})e{exponent}" if exponent else text
+
+
+def _exponent(value: float, place: int) -> int:
+    """Return the power of ten to take out of a rounded value; 0 where its digits fit."""
+    rounded_value = round(value, place)
+    if rounded_value == 0.0 or 1e-3 <= abs(rounded_value) < 1e6:
+        return 0
+    return math.floor(math.log10(abs(rounded_value)))
 
 
 def interval_text(low: float | None, high: float | None) -> str:

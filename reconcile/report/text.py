@@ -16,9 +16,9 @@ _FAMILY_LABELS = {"schulz-zimm": "Schulz–Zimm", "log-normal": "log-normal"}
 _NAMES = {
     "dispersity": "Mw/Mn (Đ)",
     "limiting_viscosity_number": "[η]",
-    "huggins_constant": "Huggins constant",
-    "kraemer_constant": "Kraemer constant",
-    "third_virial_ratio": "third virial ratio g",
+    "huggins_constant": "Huggins k",
+    "kraemer_constant": "Kraemer k",
+    "third_virial_ratio": "A3 ratio g",
 }
 _NO_UNCERTAINTY = "no uncertainty"
 
@@ -287,15 +287,10 @@ def _quantity_row(name: str, entry: Mapping[str, Any]) -> tuple[str, str, str]:
     if entry["u"] is None:
         why = entry["why"] or _NO_UNCERTAINTY
         return label, f"{value_text(value)} {unit}".strip(), f"({_NO_UNCERTAINTY}: {why})"
-    shown = f"{value_text(value, entry['u'] * factor)} {unit}".strip()
     total = entry["u_with_effects"]
-    with_effects = ""
-    if total is not None and total > 1.005 * entry["u"]:
-        both = value_text(value, total * factor)
-        with_effects = (
-            f"  [± {both.split('± ')[1].rstrip(')')}]" if "e" not in both else f"  [{both}]"
-        )
-    return label, shown + with_effects, f"95 %: {interval_text(low, high)}"
+    with_effects = None if total is None or total <= 1.005 * entry["u"] else total * factor
+    shown = value_text(value, entry["u"] * factor, with_effects)
+    return label, f"{shown} {unit}".strip(), f"95 %: {interval_text(low, high)}"
 
 
 def _inline(quantities: Mapping[str, Any]) -> str:

@@ -1,0 +1,192 @@
+"""The fit of a series of flasks: readings themselves against concentration, errors where they are.
+
+Osmotic pressures and flow times are fitted the same way. Rows of equal concentration are one flask:
+its reading errors average, its concentration error does not. That error moves reading and abscissa
+together, so it enters as u_c ∂y/∂ ln c at the fitted curve. The scatter multiplies the part of the
+covariance that comes from readings, never that of a prior.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from reconcile.adapters.common import Scatter
+from reconcile.evidence import frozen_array
+from reconcile.nonlinear import fit
+
+if TYPE_CHECKING:
+    from collections.abc import Callable, Sequence
+
+    from numpy.typing import NDArray
+
+    Array = NDArray[np.float64]
+    Model = Callable[[Array, Array], tuple[Array, Array, Array]]
+
+__all__ = ["FlaskFit", "Flasks", "Prior", "ReadingError", "fit_flasks", "group_flasks"]
+
+_PASSES = 3
+
+
+@dataclass(frozen=True, slots=True)
+class ReadingError:
+    """Standard uncertainty of one reading: absolute, relative, or not stated (``u`` None)."""
+
+    u: float | None
+    is_relative: bool = False
+
+    def of(self, mean: Array) -> Array:
+        """Return it per flask; without a stated one a constant, whose size does not matter."""
+        if self.u is None:
+            return np.full_like(mean, float(np.mean(np.abs(mean))))
+        return np.abs(mean) * self.u if self.is_relative else np.full_like(mean, self.u)
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Flasks:
+    """Readings grouped by flask.
+
+    ``c``, ``mean`` and ``count`` (k,); ``within`` Σ ((reading − mean)/error of one reading)² with
+    ``within_dof`` degrees of freedom.
+    """
+
+    c: Array
+    mean: Array
+    count: Array
+    within: float
+    within_dof: int
+
+
+@dataclass(frozen=True, slots=True)
+class Prior:
+    """A Gaussian prior on one parameter."""
+
+    index: int
+    mean: float
+    sd: float
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class FlaskFit:
+    """Parameters (p,) with covariance (p, p); NaN where nothing tells the errors' scale.
+
+    ``at_bound`` tells whether the first parameter ended on its lower bound.
+    """
+
+    values: Array
+    covariance: Array
+    scatter: Scatter
+    at_bound: bool
+
+    @property
+    def is_known(self) -> bool:
+        """Whether there is an uncertainty."""
+        return bool(np.isfinite(self.covariance).all())
+
+
+def group_flasks(c: Array, readings: Array, error: ReadingError) -> Flasks:
+    """Group readings by equal concentration.
+
+    Examples
+    --------
+    >>> flasks = group_flasks(
+    ...     np.array([1.0, 2.0, 1.0]), np.array([4.0, 5.0, 6.0]), ReadingError(0.5)
+    ... )
+    >>> flasks.c.tolist(), flasks.mean.tolist(), flasks.within, flasks.within_dof
+    ([1.0, 2.0], [5.0, 5.0], 8.0, 1)
+    """
+    unique, index = np.unique(c, return_inverse=True)
+    count = np.bincount(index).astype(float)
+    mean = np.bincount(index, readings) / count
+    deviation = (readings - mean[index]) / error.of(mean)[index]
+    within = float(deviation @ deviation)
+    return Flasks(unique, mean, count, within, len(readings) - len(unique))
+
+
+def fit_flasks(  # noqa: PLR0913 - a fit is its data, model, start and priors
+    flasks: Flasks,
+    error: ReadingError,
+    u_flask: float,
+    model: Model,
+    start: Array,
+    priors: Sequence[Prior],
+    *,
+    fixed: int = 0,
+    lower: float = -math.inf,
+) -> FlaskFit:
+    """Fit a curve to flask means.
+
+    Parameters
+    ----------
+    u_flask : float
+        Relative standard uncertainty of each flask's concentration.
+    model : callable
+        (parameters (p,), c (k,)) → readings (k,), ∂/∂parameters (k, p), ∂/∂ ln c (k,).
+    start : ndarray, shape (p,)
+        Where to start, in units of which the solver works; no entry may be zero.
+    priors : sequence of Prior
+        A parameter under a prior counts as no unknown.
+    fixed : int
+        Number of leading parameters held at their start.
+    lower : float
+        Lower bound of the first free parameter, in units of its start.
+    """
+    stated = error.u is not None
+    unknowns = len(start) - fixed - len(priors)
+    dof = len(flasks.c) - unknowns + flasks.within_dof
+    values, scale2 = start, 1.0
+    for _ in range(_PASSES):
+        sd = _sd(flasks, error, u_flask, model, values) * math.sqrt(scale2)
+        values, covariance, bound = _solve(flasks, model, (start, values), sd, priors, fixed, lower)
+        sd = _sd(flasks, error, u_flask, model, values)
+        misfit = (flasks.mean - model(values, flasks.c)[0]) / sd
+        scatter = Scatter.of(float(misfit @ misfit) + flasks.within, dof, stated=stated)
+        if not math.isfinite(scatter.scale2):
+            covariance = np.full_like(covariance, np.nan)
+            break
+        # readings on the curve to the last bit have no scatter; keep the weights finite
+        scale2 = max(scatter.scale2, 1e-24)
+    return FlaskFit(frozen_array(values), frozen_array(covariance), scatter, bound)
+
+
+def _sd(flasks: Flasks, error: ReadingError, u_flask: float, model: Model, values: Array) -> Array:
+    by_c = model(values, flasks.c)[2]
+    return np.asarray(np.hypot(error.of(flasks.mean) / np.sqrt(flasks.count), u_flask * by_c))
+
+
+def _solve(  # noqa: PLR0913, PLR0917 - as above
+    flasks: Flasks,
+    model: Model,
+    starts: tuple[Array, Array],
+    sd: Array,
+    priors: Sequence[Prior],
+    fixed: int,
+    lower: float,
+) -> tuple[Array, Array, bool]:
+    unit, at = starts
+    rows = np.array([prior.index for prior in priors], int)
+    centre = np.array([prior.mean for prior in priors])
+    width = np.array([prior.sd for prior in priors])
+
+    def complete(p: Array) -> Array:
+        return np.concatenate([unit[:fixed], p * unit[fixed:]])
+
+    def residual(p: Array) -> Array:
+        values = complete(p)
+        misfit = (model(values, flasks.c)[0] - flasks.mean) / sd
+        return np.concatenate([misfit, (values[rows] - centre) / width])
+
+    def jacobian(p: Array) -> Array:
+        slopes = model(complete(p), flasks.c)[1] / sd[:, None]
+        stacked = np.vstack([slopes, np.eye(len(unit))[rows] / width[:, None]])
+        return np.asarray((stacked * unit)[:, fixed:])
+
+    bounds = np.full(len(unit) - fixed, -np.inf)
+    bounds[0] = lower
+    found = fit(residual, jacobian, (at / unit)[fixed:], bounds)
+    covariance = np.zeros((len(unit), len(unit)))
+    covariance[fixed:, fixed:] = found.covariance
+    return complete(found.values), covariance * np.outer(unit, unit), found.at_bound[0]
