@@ -178,7 +178,8 @@ def _product(text: str) -> tuple[float, tuple[int, ...]]:
     """
     rest = _HUNDRED.sub("/dL", _canonical(text))
     rest = _BRACKETS.sub(lambda m: f"/{m[1].replace(' ', '/').replace('*', '/')}", rest)
-    factor, dimensions, position = 1.0, (0,) * 5, 0
+    factor, position = 1.0, 0
+    dimensions: tuple[int, ...] = (0,) * 5
     while position < len(rest):
         match = _FACTOR.match(rest, position)
         # an operator or a space stands between two factors, and nothing before the first

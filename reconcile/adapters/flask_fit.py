@@ -29,6 +29,7 @@ if TYPE_CHECKING:
 __all__ = ["FlaskFit", "Flasks", "Prior", "ReadingError", "fit_flasks", "group_flasks"]
 
 _PASSES = 3
+_NODES, _REACH, _STEPS = 31, 4.0, 5
 
 
 @dataclass(frozen=True, slots=True)
@@ -149,7 +150,62 @@ def fit_flasks(  # noqa: PLR0913 - a fit is its data, model, start and priors
             break
         # readings on the curve to the last bit have no scatter; keep the weights finite
         scale2 = max(scatter.scale2, 1e-24)
+    if not bound and math.isfinite(scatter.scale2):
+        sd = _sd(flasks, error, u_flask, model, values) * math.sqrt(scale2)
+        values, covariance = _marginalised(flasks, model, (values, covariance), sd, priors, fixed)
     return FlaskFit(frozen_array(values), frozen_array(covariance), scatter, bound)
+
+
+def _marginalised(
+    flasks: Flasks,
+    model: Model,
+    mode: tuple[Array, Array],
+    sd: Array,
+    priors: Sequence[Prior],
+    fixed: int,
+) -> tuple[Array, Array]:
+    """Return mean and covariance with the first prior's parameter marginalised on nodes.
+
+    Notes
+    -----
+    At each node the others are fitted by Gauss-Newton from the mode, and the node weighs
+    exp(−Q/2)/√det(JᵀJ). The mode alone is biased where that parameter bends the others: for the
+    polycarbonate table of the tests by 0.4 standard uncertainties of 1/Mn.
+    """
+    at, covariance = mode
+    moving = priors[0].index
+    spread = math.sqrt(covariance[moving, moving])
+    free = [k for k in range(fixed, len(at)) if k != moving]
+    rows = [prior for prior in priors if prior.index in free]
+    points, parts, ln_weights = [], [], []
+    for shift in np.linspace(-_REACH, _REACH, _NODES):
+        values = at.copy()
+        values[moving] += shift * spread
+        # along the ridge the others follow in proportion to their covariance
+        values[free] += shift * spread * covariance[free, moving] / covariance[moving, moving]
+        for _ in range(_STEPS):
+            y, slopes, _ = model(values, flasks.c)
+            jacobian = slopes[:, free] / sd[:, None]
+            misfit = (flasks.mean - y) / sd
+            for prior in rows:
+                jacobian = np.vstack([jacobian, np.eye(len(at))[prior.index, free] / prior.sd])
+                misfit = np.append(misfit, (prior.mean - values[prior.index]) / prior.sd)
+            step, *_ = np.linalg.lstsq(jacobian * at[free], misfit, rcond=None)
+            values[free] += step * at[free]
+        off = (values[moving] - priors[0].mean) / priors[0].sd
+        scaled = jacobian * at[free]
+        points.append(values)
+        parts.append(np.linalg.inv(scaled.T @ scaled) * np.outer(at[free], at[free]))
+        _, ln_det = np.linalg.slogdet(scaled.T @ scaled)
+        ln_weights.append(-0.5 * (float(misfit @ misfit) + off**2 + ln_det))
+    weight = np.exp(np.array(ln_weights) - max(ln_weights))
+    weight /= weight.sum()
+    stacked = np.array(points)
+    mean = weight @ stacked
+    off_mean = stacked - mean
+    total = np.einsum("k,ki,kj->ij", weight, off_mean, off_mean)
+    total[np.ix_(free, free)] += np.einsum("k,kij->ij", weight, np.array(parts))
+    return mean, total
 
 
 def _sd(flasks: Flasks, error: ReadingError, u_flask: float, model: Model, values: Array) -> Array:
