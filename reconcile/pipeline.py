@@ -18,7 +18,7 @@ from reconcile.estimate.selfcheck import draw
 from reconcile.estimate.system import build_system
 from reconcile.judge.consistency import assess
 from reconcile.measurement import Quantity
-from reconcile.result import estimate_part, judgement_part, reductions_part
+from reconcile.result import canonical, estimate_part, judgement_part, reductions_part
 
 if TYPE_CHECKING:
     from pathlib import Path
@@ -95,7 +95,7 @@ def _software() -> dict[str, Any]:
 def reduce_case(prepared: Prepared) -> dict[str, Any]:
     """Return the result document of the reductions alone (``estimate`` is null)."""
     reductions, effects = _reduce(prepared)
-    return reductions_part(prepared.case, reductions, effects, _software())
+    return canonical(reductions_part(prepared.case, reductions, effects, _software()))
 
 
 def run_case(prepared: Prepared) -> dict[str, Any]:
@@ -121,12 +121,14 @@ def run_case(prepared: Prepared) -> dict[str, Any]:
     draws = draw(result, seed)
     free = family_free(system, seed)
     consistency = assess(result, free)
-    return {
-        **reductions_part(case, reductions, effects, _software()),
-        "estimate": estimate_part(result, targets, draws),
-        **judgement_part(consistency, free, case.limits, draws),
-        "findings": applicability(case, reductions, result, draws),
-    }
+    return canonical(
+        {
+            **reductions_part(case, reductions, effects, _software()),
+            "estimate": estimate_part(result, targets, draws),
+            **judgement_part(consistency, free, case.limits, draws),
+            "findings": applicability(case, reductions, result, draws),
+        }
+    )
 
 
 def _targets(system: System) -> tuple[Target, ...]:

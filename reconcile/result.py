@@ -26,7 +26,7 @@ if TYPE_CHECKING:
     from reconcile.judge.consistency import Consistency
     from reconcile.measurement import Case, Effect, Measurement
 
-__all__ = ["estimate_part", "judgement_part", "reductions_part", "to_json"]
+__all__ = ["canonical", "estimate_part", "judgement_part", "reductions_part", "to_json"]
 
 _CURVE_POINTS = 161
 
@@ -45,6 +45,12 @@ def to_json(document: Mapping[str, Any]) -> str:
     return (
         json.dumps(document, indent=2, sort_keys=True, ensure_ascii=False, allow_nan=False) + "\n"
     )
+
+
+def canonical(document: Mapping[str, Any]) -> dict[str, Any]:
+    """Return the document as reading its JSON text gives it, so that both show the same order."""
+    plain: dict[str, Any] = json.loads(to_json(document))
+    return plain
 
 
 def _number(value: Any) -> float | None:
@@ -130,7 +136,10 @@ def _measurement(stated: Measurement, reduction: Reduction) -> dict[str, Any]:
         "findings": [_finding(finding) for finding in reduction.findings],
         "excluded": _plain([dict(entry) for entry in reduction.excluded]),
         "assumptions": list(reduction.assumptions),
-        "readings": {name: _plain(column) for name, column in reduction.readings.items()},
+        "readings": [
+            {"heading": name, "values": _plain(column)}
+            for name, column in reduction.readings.items()
+        ],
         "fit": _plain(dict(reduction.fit)),
         "evidence": _evidence(reduction.evidence),
         "effects": list(stated.effects) + [effect.id for effect in reduction.effects],

@@ -48,6 +48,7 @@ ORDER = [
     "report.files",
     "pipeline",
     "cli",
+    "__main__",
 ]
 
 ONE_PLACE = {

@@ -167,7 +167,8 @@ def _reading_error(
     if entry.kind == "ratio":
         return ReadingError(entry.value, is_relative=True)
     if entry.kind == "length":
-        if weight == 0.0:
+        # without the density, heads have already been refused
+        if weight == 0.0 and "pi" in table_of(measurement).columns:
             problems.append(
                 measurement.place.problem(
                     "u_reading",

@@ -20,6 +20,10 @@ _NAMES = {
     "kraemer_constant": "Kraemer k",
     "third_virial_ratio": "A3 ratio g",
 }
+_ORDER = (
+    "Mn", "Mw", "Mz", "limiting_viscosity_number", "huggins_constant", "kraemer_constant", "Mv",
+    "A2", "third_virial_ratio", "Rg", "dispersity",
+)  # fmt: skip
 _NO_UNCERTAINTY = "no uncertainty"
 
 _ASCII = str.maketrans(
@@ -254,7 +258,7 @@ def _instruments(page: _Page, document: Mapping[str, Any], *, verbose: bool) -> 
     for entry in document["measurements"]:
         page.heading(f"{entry['name']} ({entry['technique'].replace('_', ' ')})")
         page.line(_medium(entry) + entry["form"], 2, 4)
-        rows = [_quantity_row(name, value) for name, value in entry["quantities"].items()]
+        rows = [_quantity_row(name, value) for name, value in _ordered(entry["quantities"])]
         _compact(page, rows)
         if any(v["u_with_effects"] is not None for v in entry["quantities"].values()):
             page.line("± is the standard uncertainty; shared effects in brackets.", 2)
@@ -293,9 +297,14 @@ def _quantity_row(name: str, entry: Mapping[str, Any]) -> tuple[str, str, str]:
     return label, f"{shown} {unit}".strip(), f"95 %: {interval_text(low, high)}"
 
 
+def _ordered(quantities: Mapping[str, Any]) -> list[tuple[str, Any]]:
+    rank = {name: i for i, name in enumerate(_ORDER)}
+    return sorted(quantities.items(), key=lambda item: rank.get(item[0], len(rank)))
+
+
 def _inline(quantities: Mapping[str, Any]) -> str:
     parts = []
-    for name, entry in quantities.items():
+    for name, entry in _ordered(quantities):
         factor, unit = scaled_unit(entry["unit"], entry["value"])
         u = None if entry["u"] is None else entry["u"] * factor
         value = None if entry["value"] is None else entry["value"] * factor
@@ -307,9 +316,9 @@ def _reading_table(page: _Page, entry: Mapping[str, Any]) -> None:
     columns = entry["readings"]
     if not columns:
         return
-    names = list(columns)
+    names = [column["heading"] for column in columns]
     page.line("Readings and fit:", 2)
-    cells = [[f"{x:.5g}" if x is not None else "–" for x in columns[name]] for name in names]
+    cells = [[f"{x:.5g}" if x is not None else "–" for x in column["values"]] for column in columns]
     widths = [max([8, *(len(c) for c in column)]) for column in cells]
     for i, name in enumerate(names):
         page.line(f"({i + 1}) {name}", 4)
