@@ -19,13 +19,14 @@ from reconcile.estimate.system import build_system
 from reconcile.judge.consistency import assess
 from reconcile.measurement import Quantity
 from reconcile.result import canonical, estimate_part, judgement_part, reductions_part
+from reconcile.schema import load_schema
 
 if TYPE_CHECKING:
     from pathlib import Path
 
     from reconcile.estimate.system import System
     from reconcile.evidence import Reduction
-    from reconcile.measurement import Case, Effect
+    from reconcile.measurement import Case, Effect, Measurement
 
 __all__ = ["Prepared", "describe", "load", "prepare", "reduce_case", "run_case"]
 
@@ -143,6 +144,27 @@ def _targets(system: System) -> tuple[Target, ...]:
     return tuple(targets)
 
 
+def _stated(entry: Any) -> str:
+    """Return a stated field as the user wrote it, nested tables on one line."""
+    if isinstance(entry, Quantity):
+        return entry.text
+    if isinstance(entry, dict):
+        return ", ".join(f"{key} {_stated(value)}" for key, value in entry.items())
+    if isinstance(entry, list):
+        return " to ".join(_stated(value) for value in entry)
+    return f"{entry:g}" if isinstance(entry, float) else str(entry)
+
+
+def _defaults(measurement: Measurement) -> list[str]:
+    """Return the schema's defaults that stand in for what was not stated."""
+    known = load_schema("case-1")["$defs"][measurement.technique]["properties"]
+    return [
+        f"{key} = {entry['default']} (default)"
+        for key, entry in known.items()
+        if "default" in entry and key not in measurement.fields
+    ]
+
+
 def describe(prepared: Prepared) -> tuple[str, list[dict[str, Any]]]:
     """Return what `check` prints: a head line, and per measurement what will be used."""
     case = prepared.case
@@ -159,11 +181,8 @@ def describe(prepared: Prepared) -> tuple[str, list[dict[str, Any]]]:
         if table is not None:
             columns = ", ".join(f"{key} [{unit or '1'}]" for key, unit in table.units.items())
             lines.append(f"{table.file}: {len(table)} rows; {columns}")
-        lines += [
-            f"{key} = {entry.text}"
-            for key, entry in sorted(measurement.fields.items())
-            if isinstance(entry, Quantity)
-        ]
+        lines += [f"{key} = {_stated(entry)}" for key, entry in sorted(measurement.fields.items())]
+        lines += _defaults(measurement)
         if "u_reading" not in measurement.fields and table is not None:
             lines.append("no u_reading: the scatter of the readings will set the scale")
         for key in measurement.effects:

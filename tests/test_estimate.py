@@ -169,6 +169,20 @@ def test_one_average_leaves_dispersity_undetermined():
     assert result.averages["Mn"].reading == "interval"
 
 
+def test_one_viscosity_number_settles_its_own_average_and_nothing_else():
+    targets = (*TARGETS, Target("Mv", "Mv", PAIR.a, 0))
+    result = solved(viscosity(70.0), targets=targets)
+
+    mv = result.averages["Mv"]
+    assert result.dispersity.reading == "undetermined"
+    assert mv.reading == "interval"
+    assert mv.value == pytest.approx((70.0 / PAIR.K) ** (1.0 / PAIR.a), rel=0.01)
+    # (u of readings, stock and K over a; the exponent's about M_ref is small here)
+    u = math.hypot(0.015, 0.01, 0.04) / PAIR.a
+    assert np.ptp(np.log(mv.interval95)) == pytest.approx(2 * 1.96 * u, rel=0.05)
+    assert result.averages["Mn"].reading == "upper limit"
+
+
 def test_mass_average_and_viscosity_alone_have_no_upper_limit():
     result = solved(mass(262e3), viscosity(62.0), targets=())
 

@@ -44,6 +44,9 @@ _PROFILE_T, _PROFILE_X = 201, 401
 _DEPTH = 22.0
 """ln-likelihood below its maximum at which the refined grid ends."""
 
+_SETTLED = 0.01
+"""Change of ln(average) per unit of t at the end of the grid below which it counts as settled."""
+
 PRIOR_MAX_DISPERSITY = 30.0
 """Upper end of the prior flat in ln Đ, for family weights and predictions only."""
 
@@ -321,16 +324,19 @@ def _profile(
     profile = joint.max(axis=1)
     where = joint.argmax(axis=1)
     deviance = 2.0 * (profile.max() - profile)
-    unbounded = fine[-1] >= T_MAX - 1e-9
+    # where the grid ends, an average may still be on its way: down, up, or settled
+    drift = max((p[0][-1] - p[0][-2] for p in parts), key=abs) / (t[-1] - t[-2])
+    falls = fine[-1] >= T_MAX - 1e-9 and drift < -_SETTLED
+    rises = fine[-1] >= T_MAX - 1e-9 and drift > _SETTLED
     ends = {}
     for key, level in LEVELS.items():
         q = cut(level, dof)
         inside = np.flatnonzero(deviance <= q)
         lower, upper = likelihood_interval(x, deviance, q)
         # an end that rests on the last shape of the grid has no limit in the data
-        if unbounded and where[inside[0]] == len(t) - 1:
+        if falls and where[inside[0]] == len(t) - 1:
             lower = None
-        if unbounded and where[inside[-1]] == len(t) - 1:
+        if rises and where[inside[-1]] == len(t) - 1:
             upper = None
         ends[key] = (
             None if lower is None else float(np.exp(lower)),

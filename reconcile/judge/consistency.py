@@ -18,6 +18,9 @@ if TYPE_CHECKING:
 
 __all__ = ["Consistency", "Residual", "assess"]
 
+_NOTICEABLE = 1.0
+"""χ² without degrees of freedom from which a misfit at the edge of the families is mentioned."""
+
 _N_SHAPE = 2
 """Unknowns without a prior: ln Mw and the shape."""
 
@@ -66,7 +69,12 @@ def assess(result: JointEstimate, free: FamilyFree) -> Consistency:
         p_value = float(fdtrc(dof, nu, fit.chi2 / dof) if heavy else chdtrc(dof, fit.chi2))
     verdict = _verdict(p_value, free)
     return Consistency(
-        verdict, fit.chi2, max(dof, 0), p_value, residuals, _statement(verdict, p_value, free)
+        verdict,
+        fit.chi2,
+        max(dof, 0),
+        p_value,
+        residuals,
+        _statement(verdict, p_value, fit.chi2, free),
     )
 
 
@@ -80,14 +88,17 @@ def _verdict(p_value: float | None, free: FamilyFree) -> str:
     return "doubtful" if p_value < 0.05 else "consistent"
 
 
-def _statement(verdict: str, p_value: float | None, free: FamilyFree) -> str:
+def _statement(verdict: str, p_value: float | None, chi2: float, free: FamilyFree) -> str:
     if not free.possible:
         return (
             "No molar-mass distribution of any shape has these averages"
             f" (p = {free.p_value:.1g}); which measurement is wrong is not named yet."
         )
     if p_value is None:
-        return "There are no more measurements than unknowns: whether they agree cannot be tested."
+        text = "There are no more measurements than unknowns: whether they agree cannot be tested."
+        if chi2 > _NOTICEABLE:
+            text += f" Yet neither family meets them all (χ² = {chi2:.2g})."
+        return text
     p = f"{p_value:.1g}" if p_value < 0.1 else f"{p_value:.2f}"
     if verdict == "consistent":
         return f"The measurements tell one story (p = {p})."

@@ -167,6 +167,8 @@ def _answer(page: _Page, document: Mapping[str, Any]) -> None:
     page.line(f"Verdict: {consistency['verdict']}. {consistency['statement']}", 2, 2)
     for entry in document["limits"]:
         page.line(_limit_sentence(entry), 2, 4)
+    if document["limits"]:
+        page.line("Release decisions belong to qualified people under local rules.", 2)
 
 
 def _compact(page: _Page, rows: list[tuple[str, str, str]]) -> None:
@@ -182,7 +184,7 @@ def _compact(page: _Page, rows: list[tuple[str, str, str]]) -> None:
 
 
 def _answer_row(label: str, entry: Mapping[str, Any]) -> tuple[str, str, str]:
-    factor, unit = scaled_unit(entry["unit"], entry["value"] or entry["interval95"][0])
+    factor, unit = scaled_unit(entry["unit"], _size(entry))
     low, high = (None if end is None else end * factor for end in entry["interval95"])
     if entry["reading"] == "undetermined":
         return label, "undetermined", "these data do not bound it"
@@ -193,6 +195,19 @@ def _answer_row(label: str, entry: Mapping[str, Any]) -> tuple[str, str, str]:
     half = (high - low) / 3.92 if low is not None and high is not None else None
     value = value_text(entry["value"] * factor, half).split(" ±")[0].strip("(")
     return label, f"{value} {unit}".strip(), f"95 %: {interval}"
+
+
+def _size(entry: Mapping[str, Any]) -> float | None:
+    """Return the number that sets an entry's unit: its finite limit, else its value."""
+    ends = [end for end in entry["interval95"] if end is not None]
+    return ends[0] if entry["reading"] != "interval" and ends else entry["value"]
+
+
+def _mass_interval(entry: Mapping[str, Any]) -> str:
+    low, high = entry["interval95"]
+    factor, unit = scaled_unit(entry["unit"], low or high)
+    ends = (None if end is None else end * factor for end in (low, high))
+    return f"{interval_text(*ends)} {unit}".strip()
 
 
 def _limit_sentence(entry: Mapping[str, Any]) -> str:
@@ -211,8 +226,7 @@ def _limit_sentence(entry: Mapping[str, Any]) -> str:
     name = _NAMES.get(entry["quantity"], entry["quantity"])
     return (
         f"Limit {name} {text} {unit}".rstrip()
-        + f": probability that the true value meets it {shown}. Release decisions belong to"
-        " qualified people under local rules."
+        + f": probability that the true value meets it {shown}."
     )
 
 
@@ -260,8 +274,8 @@ def _instruments(page: _Page, document: Mapping[str, Any], *, verbose: bool) -> 
         page.line(_medium(entry) + entry["form"], 2, 4)
         rows = [_quantity_row(name, value) for name, value in _ordered(entry["quantities"])]
         _compact(page, rows)
-        if any(v["u_with_effects"] is not None for v in entry["quantities"].values()):
-            page.line("± is the standard uncertainty; shared effects in brackets.", 2)
+        if any("[±" in row[1] for row in rows):
+            page.line("± is the standard uncertainty, in brackets with shared effects.", 2)
         for text in entry["assumptions"]:
             page.line(f"assumed: {text}.", 2, 4)
         if entry["alternatives"]:
@@ -334,7 +348,8 @@ def _beneath(page: _Page, document: Mapping[str, Any], *, verbose: bool) -> None
         d = fit["averages"]["dispersity"]
         page.line(
             f"{_FAMILY_LABELS[name]}: Đ {interval_text(*d['interval95'])} (95 %),"
-            f" weight {fit['weight']:.2f}, χ² {fit['chi2']:.2f}",
+            f" Mz {_mass_interval(fit['averages']['Mz'])}, weight {fit['weight']:.2f},"
+            f" χ² {fit['chi2']:.2f}",
             2,
             4,
         )
