@@ -200,7 +200,8 @@ def _answer_row(label: str, entry: Mapping[str, Any]) -> tuple[str, str, str]:
 def _size(entry: Mapping[str, Any]) -> float | None:
     """Return the number that sets an entry's unit: its finite limit, else its value."""
     ends = [end for end in entry["interval95"] if end is not None]
-    return ends[0] if entry["reading"] != "interval" and ends else entry["value"]
+    size: float | None = ends[0] if entry["reading"] != "interval" and ends else entry["value"]
+    return size
 
 
 def _mass_interval(entry: Mapping[str, Any]) -> str:
