@@ -144,7 +144,7 @@ def run(  # noqa: PLR0913 - one parameter per option
 
     document = run_case(prepare(load(case, allow_outside=allow_outside)))
     if out is not None:
-        write_all(document, out)
+        write_all(document, out, [case.parent / entry["path"] for entry in document["inputs"]])
     _print(
         document,
         as_json=as_json,

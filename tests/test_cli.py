@@ -366,6 +366,18 @@ def test_report_refuses_what_is_no_result(tmp_path):
         assert "Traceback" not in result.stderr
 
 
+def test_out_never_writes_over_an_input(tmp_path):
+    path = write(tmp_path, GOOD.replace('"osmometry.csv"', '"quantities.csv"'), table=None)
+    (tmp_path / "quantities.csv").write_text(TABLE)
+
+    result = run_cli("run", path, "--out", tmp_path)
+
+    assert result.exit_code == 3
+    assert "is an input of this case" in result.stderr
+    assert (tmp_path / "quantities.csv").read_text() == TABLE
+    assert not (tmp_path / "result.json").exists()
+
+
 def test_out_that_is_a_file_is_refused(tmp_path):
     (tmp_path / "out").write_text("mine")
     result = run_cli("run", DEMO, "--out", tmp_path / "out")

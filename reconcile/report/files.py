@@ -16,7 +16,7 @@ from reconcile.result import to_json
 from reconcile.schema import validate
 
 if TYPE_CHECKING:
-    from collections.abc import Mapping
+    from collections.abc import Iterable, Mapping
 
 __all__ = ["load_result", "write_all", "write_text"]
 
@@ -40,13 +40,21 @@ def write_text(path: Path, text: str) -> None:
         raise
 
 
-def write_all(document: Mapping[str, Any], out: Path) -> None:
+def write_all(document: Mapping[str, Any], out: Path, inputs: Iterable[Path] = ()) -> None:
     """Write result.json, report.txt and the tables of a result document to a folder.
+
+    Parameters
+    ----------
+    document : mapping
+    out : Path
+        The folder; made if it does not exist.
+    inputs : iterable of Path
+        Files that must not be written over.
 
     Raises
     ------
     InputError
-        If the folder cannot be made or written to.
+        If the folder cannot be made or written to, or an input lies where a file would go.
     """
     files = {"result.json": to_json(document), "quantities.csv": _quantities_csv(document)}
     if document["estimate"] is None:
@@ -54,6 +62,14 @@ def write_all(document: Mapping[str, Any], out: Path) -> None:
     else:
         files["report.txt"] = full_report(document, verbose=True)
         files["distribution.csv"] = _curves_csv(document)
+    kept = {path.resolve() for path in inputs}
+    problems = [
+        Problem(str(out / name), 0, "", "is an input of this case", "give --out another folder")
+        for name in files
+        if (out / name).resolve() in kept
+    ]
+    if problems:
+        raise InputError(problems)
     try:
         out.mkdir(parents=True, exist_ok=True)
         for name, text in files.items():
