@@ -92,7 +92,7 @@ def _averages(system: System) -> _Averages | None:
     pick, orders, ln_m, slope = [], [], [], []
     for i, observable in enumerate(system.observables):
         found = _mean_order(observable)
-        if found is None or value[i] <= 0.0:
+        if found is None or value[i] <= 0.0 or system.rows[i].link is not None:
             continue
         order, power = found
         constant = observable.ln_constant

@@ -111,6 +111,7 @@ def load_case(
         _limits(data.get("limits", {})),
         inputs,
         digest,
+        bool(data.get("estimate", {}).get("link_A2", False)),
     )
 
 

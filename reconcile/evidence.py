@@ -61,6 +61,9 @@ class Row:
         Effect id → ∂ ln(value on its scale)/∂e, with e = ln(used/true).
     medium : str or None
         Solvent and temperature, for quantities that depend on them.
+    link : Observable or None
+        What the row observes up to a factor common to its medium; used only where the user asks
+        for rows of one medium to be linked.
     """
 
     quantity: str
@@ -69,6 +72,7 @@ class Row:
     dof: float = math.inf
     derivatives: Mapping[str, float] = field(default_factory=dict)
     medium: str | None = None
+    link: Observable | None = None
 
 
 @dataclass(frozen=True, slots=True)

@@ -41,6 +41,8 @@ EFFECT_TARGETS: Mapping[str, str] = MappingProxyType(
         "mark_houwink_a": "Mark-Houwink exponent (absolute)",
         "size_law": "Rg = K M^nu at its reference molar mass",
         "value": "a stated value as a whole",
+        "virial_scale": "A2 of a medium at 100 kg/mol, an unknown without prior",
+        "virial_model": "ratio of the A2 of two techniques beyond the mixing rule",
     }
 )
 """What a systematic effect can act on; the sign is e = ln(used/true) for all but the exponent."""
@@ -164,3 +166,4 @@ class Case:
     limits: Mapping[str, tuple[float | None, float | None]]
     inputs: tuple[tuple[str, str], ...]
     digest: str
+    link_virial: bool = False

@@ -35,8 +35,13 @@ __all__ = [
     "inverse_average",
     "limiting_viscosity_number",
     "mean_square_radius",
+    "osmotic_virial",
+    "scattering_virial",
     "viscosity_average",
 ]
+
+VIRIAL_EXPONENT = 0.22
+"""γ in A₂ ∝ M^−γ of uniform chains in a good solvent; theory 2 − 3ν, experiment 0.20 to 0.25."""
 
 _ORDERS: dict[str, tuple[tuple[float, float], ...]] = {
     "Mn": ((-1.0, -1.0),),  # Mn = 1/⟨M^−1⟩_w
@@ -189,3 +194,20 @@ def limiting_viscosity_number(
 def mean_square_radius(law: SizeLaw) -> Observable:
     """Return ⟨Rg²⟩_z = K²⟨M^{1+2ν}⟩_w/Mw in cm²."""
     return Observable("Rg²", ((1.0, 1.0 + 2.0 * law.nu), (-1.0, 1.0)), 2.0 * math.log(law.K))
+
+
+def osmotic_virial() -> Observable:
+    """Return A₂ of osmometry over a scale of its medium: Σ w_i w_j A_ij.
+
+    Notes
+    -----
+    With A_ij = √(A_ii A_jj) and A_ii ∝ M^−γ both sums of A₂ are mass moments (E. F. Casassa, 1962,
+    from memory): ⟨M^−γ/2⟩_w² here, ⟨M^{1−γ/2}⟩_w²/Mw² for light scattering.
+    """
+    return Observable("A2, osmotic", ((2.0, -VIRIAL_EXPONENT / 2.0),))
+
+
+def scattering_virial() -> Observable:
+    """Return A₂ of light scattering over the same scale: Σ w_i w_j M_i M_j A_ij / Mw²."""
+    order = 1.0 - VIRIAL_EXPONENT / 2.0
+    return Observable("A2, scattering", ((2.0, order), (-2.0, 1.0)))

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import platform
-from dataclasses import dataclass
+from dataclasses import asdict, dataclass
 from importlib.metadata import version
 from typing import TYPE_CHECKING, Any
 
@@ -16,6 +16,8 @@ from reconcile.errors import EstimateError, InputError, Problem
 from reconcile.estimate.joint import Target, estimate
 from reconcile.estimate.selfcheck import draw
 from reconcile.estimate.system import build_system
+from reconcile.estimate.virial_link import link_virial
+from reconcile.evidence import Finding
 from reconcile.judge.consistency import assess
 from reconcile.measurement import Quantity
 from reconcile.result import canonical, estimate_part, judgement_part, reductions_part
@@ -115,6 +117,10 @@ def run_case(prepared: Prepared) -> dict[str, Any]:
             f"{case.file}: no measurement has an uncertainty, so none can enter a joint estimate\n"
             "  state u_reading, or run `reconcile reduce` for the reductions alone"
         )
+    linked: list[str] = []
+    if case.link_virial:
+        evidence, links, linked = link_virial(evidence)
+        effects.update({effect.id: effect for effect in links})
     system = build_system(evidence, effects)
     targets = _targets(system)
     seed = int(case.digest[:16], 16)
@@ -127,9 +133,21 @@ def run_case(prepared: Prepared) -> dict[str, Any]:
             **reductions_part(case, reductions, effects, _software()),
             "estimate": estimate_part(result, targets, draws),
             **judgement_part(consistency, free, case.limits, draws),
-            "findings": applicability(case, reductions, result, draws),
+            "findings": applicability(case, reductions, result, draws) + _links(case, linked),
         }
     )
+
+
+def _links(case: Case, linked: list[str]) -> list[dict[str, Any]]:
+    """Return what came of the wish to link A2, as a finding."""
+    if not case.link_virial:
+        return []
+    text = f"A2 of {' and '.join(linked)} linked through the distribution"
+    remedy = "compare Mn and the verdict with a run without link_A2"
+    if not linked:
+        text = "no two positive A2 share a solvent and temperature: nothing was linked"
+        remedy = "name solvent and temperature in both measurements"
+    return [asdict(Finding("virial-link", "note", text, remedy))]
 
 
 def _targets(system: System) -> tuple[Target, ...]:

@@ -86,6 +86,18 @@ def test_expansion_left_uncorrected_is_a_finding(tmp_path):
     assert "no-expansion-correction" in codes(demo_with(tmp_path, change))
 
 
+def test_linking_a2_on_request(tmp_path, demo):
+    """The example's A2 are drawn with a ratio of 0.875, as good solvents have it at this Đ."""
+    linked = demo_with(tmp_path, ("[limits]", "[estimate]\nlink_A2 = true\n\n[limits]"))
+
+    assert "virial-link" in codes(linked)
+    assert "virial-link" not in codes(demo)
+    assert linked["consistency"]["dof"] == demo["consistency"]["dof"] + 1
+    assert linked["consistency"]["verdict"] == "consistent"
+    low, high = linked["estimate"]["averages"]["Mn"]["interval95"]
+    assert low <= 262e3 / 2.1 <= high
+
+
 def test_increment_from_the_same_stock_turns_the_sign(tmp_path, demo):
     """With dn/dc from tables a stock error moves Mn and Mw apart, from the same stock together."""
     change = ('from = "literature"', 'from = "same stock", effect = "stock"')

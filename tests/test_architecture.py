@@ -29,6 +29,7 @@ ORDER = [
     "adapters.viscometry",
     "adapters.stated",
     "adapters.registry",
+    "estimate.virial_link",
     "estimate.system",
     "estimate.engine",
     "estimate.linearised",

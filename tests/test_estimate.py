@@ -15,6 +15,7 @@ from reconcile.estimate.intervals import cut
 from reconcile.estimate.joint import Target, estimate
 from reconcile.estimate.selfcheck import draw
 from reconcile.estimate.system import build_system
+from reconcile.estimate.virial_link import link_virial
 from reconcile.evidence import Evidence, Row, Tabulated, frozen_array
 from reconcile.judge.consistency import assess
 from reconcile.measurement import Effect
@@ -23,6 +24,8 @@ from reconcile.observables import (
     average,
     inverse_average,
     limiting_viscosity_number,
+    osmotic_virial,
+    scattering_virial,
     viscosity_average,
 )
 
@@ -400,3 +403,68 @@ def test_size_of_the_chain_test_at_its_apex():
     alarms = sum(chain(*each).p_value < 0.05 for each in m)
 
     assert abs(alarms / n - 0.05) < 3 * math.sqrt(0.05 * 0.95 / n)
+
+
+@pytest.mark.parametrize(
+    ("dispersity", "family", "expected"),
+    # A2 of scattering over that of osmometry, geometric mixing, A2 ∝ M^−0.20 to −0.25 (worked out
+    # apart from this program; modern theory: A. Pelissetto, Macromolecules 2006)
+    [
+        (1.5, "schulz-zimm", (0.92, 0.93)),
+        (2.0, "schulz-zimm", (0.88, 0.90)),
+        (3.0, "schulz-zimm", (0.84, 0.87)),
+        (2.0, "log-normal", (0.84, 0.87)),
+        (3.0, "log-normal", (0.76, 0.80)),
+    ],
+)
+def test_ratio_of_virial_coefficients(dispersity, family, expected):
+    t, mu = np.array([math.log(dispersity - 1.0)]), np.array([12.0])
+    member = FAMILIES[family]
+    osmotic = osmotic_virial().predict(member, t, mu).value
+    scattering = scattering_virial().predict(member, t, mu).value
+
+    ratio = float(np.exp(scattering - osmotic)[0])
+    assert expected[0] - 0.005 <= ratio <= expected[1] + 0.005
+
+
+def with_virial(evidence, value, relative, link):
+    """Return one-row evidence with an A2 row correlated by −0.8 with the first."""
+    first = evidence.covariance[0, 0]
+    sd = relative * value
+    covariance = [[first, -0.8 * math.sqrt(first) * sd], [-0.8 * math.sqrt(first) * sd, sd**2]]
+    return replace(
+        evidence,
+        rows=(*evidence.rows, Row("A2", None, "", medium="butanone, 25 °C", link=link)),
+        values=frozen_array([*evidence.values, value]),
+        covariance=frozen_array(covariance),
+    )
+
+
+def test_linked_virial_coefficients_sharpen_mn_and_are_off_unless_asked():
+    osmosis = with_virial(number(131e3), 4.0e-4, 0.10, osmotic_virial())
+    scattering = with_virial(mass(262e3), 3.5e-4, 0.03, scattering_virial())
+
+    plain = solved(osmosis, scattering)
+    alone = solved(number(131e3), mass(262e3))
+    linked, links, said = link_virial([osmosis, scattering])
+    effects = {**EFFECTS, **{effect.id: effect for effect in links}}
+    together = estimate(build_system(linked, effects), TARGETS)
+
+    np.testing.assert_allclose(ends(plain.dispersity), ends(alone.dispersity), rtol=1e-9)
+    assert said == ["butanone, 25 °C"]
+    assert np.ptp(ends(together.averages["Mn"])) < 0.95 * np.ptp(ends(plain.averages["Mn"]))
+    # four rows, three unknowns without prior
+    assert assess(together, family_free(together.system, 1)).dof == 1
+    assert assess(together, family_free(together.system, 1)).p_value > 0.05
+
+
+def test_virial_coefficients_of_different_media_stay_apart():
+    osmosis = with_virial(number(131e3), 4.0e-4, 0.10, osmotic_virial())
+    other = with_virial(mass(262e3), 3.5e-4, 0.03, scattering_virial())
+    other = replace(other, rows=(other.rows[0], replace(other.rows[1], medium="toluene, 25 °C")))
+
+    linked, links, said = link_virial([osmosis, other])
+
+    assert links == []
+    assert said == []
+    assert linked == [osmosis, other]

@@ -28,7 +28,7 @@ from reconcile.evidence import (
     frozen_array,
 )
 from reconcile.measurement import Effect
-from reconcile.observables import inverse_average, mean_square_radius
+from reconcile.observables import inverse_average, mean_square_radius, scattering_virial
 
 if TYPE_CHECKING:
     from collections.abc import Mapping
@@ -111,7 +111,15 @@ def _rows(series: Series, fit: sf.SurfaceFit) -> tuple[tuple[Row, ...], Array, A
         derivatives["Rg"][f"{slug(series.name)}_size_law"] = -2.0
     rows = (
         Row("Mw", inverse_average("Mw"), "1/Mw [mol/g]", dof[0], derivatives["Mw"], series.medium),
-        Row("A2", None, "A2 [mol mL/g²]", dof[1], derivatives["A2"], series.medium),
+        Row(
+            "A2",
+            None,
+            "A2 [mol mL/g²]",
+            dof[1],
+            derivatives["A2"],
+            series.medium,
+            scattering_virial(),
+        ),
         Row(
             "Rg",
             None if law is None else mean_square_radius(law),

@@ -34,7 +34,7 @@ from reconcile.evidence import (
 )
 from reconcile.linalg import least_squares
 from reconcile.measurement import ColumnSpec, Effect
-from reconcile.observables import inverse_average
+from reconcile.observables import inverse_average, osmotic_virial
 
 if TYPE_CHECKING:
     from collections.abc import Mapping
@@ -254,16 +254,13 @@ def _rows(series: Series, virial: FlaskFit) -> tuple[Row, ...]:
     # I and A2 both scale as π/(RT); I falls with c, A2 with c²
     inverse = {"concentration": -1.0, "pressure": 1.0, "temperature": -1.0}
     slope = {"concentration": -2.0, "pressure": 1.0, "temperature": -1.0}
+    mn = effect_derivatives(series.effects, series.named, inverse)
+    a2 = effect_derivatives(series.effects, series.named, slope)
+    medium = series.medium
     return (
-        Row(
-            "Mn", inverse_average("Mn"), "1/Mn [mol/g]", nu,
-            effect_derivatives(series.effects, series.named, inverse), series.medium,
-        ),
-        Row(
-            "A2", None, "A2 [mol mL/g²]", nu,
-            effect_derivatives(series.effects, series.named, slope), series.medium,
-        ),
-    )  # fmt: skip
+        Row("Mn", inverse_average("Mn"), "1/Mn [mol/g]", nu, mn, medium),
+        Row("A2", None, "A2 [mol mL/g²]", nu, a2, medium, osmotic_virial()),
+    )
 
 
 _UNKNOWN = "no reading error was stated and there is no scatter to learn it from"

@@ -73,6 +73,11 @@ class System:
         return len(self.rows)
 
     @property
+    def n_unknown(self) -> int:
+        """Number of unknowns without a prior: shape, ln Mw, scales of linked media."""
+        return 2 + sum(effect.target == "virial_scale" for effect in self.effects)
+
+    @property
     def n_inner(self) -> int:
         """Number of inner unknowns: ln Mw, the effects, the exponent errors."""
         return 1 + len(self.effects) + len(self.exponents)

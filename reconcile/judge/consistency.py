@@ -21,9 +21,6 @@ __all__ = ["Consistency", "Residual", "assess"]
 _NOTICEABLE = 1.0
 """χ² without degrees of freedom from which a misfit at the edge of the families is mentioned."""
 
-_N_SHAPE = 2
-"""Unknowns without a prior: ln Mw and the shape."""
-
 
 @dataclass(frozen=True, slots=True)
 class Residual:
@@ -56,7 +53,7 @@ def assess(result: JointEstimate, free: FamilyFree) -> Consistency:
     Without degrees of freedom only the latter can speak, else ``not testable``.
     """
     fit = result.best
-    dof = result.system.n_rows - _N_SHAPE
+    dof = result.system.n_rows - result.system.n_unknown
     pulls = fit.linearised.pulls()
     residuals = tuple(
         Residual(name, row.quantity, None if math.isnan(z) else float(z))
