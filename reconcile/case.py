@@ -8,6 +8,7 @@ columns each can read.
 from __future__ import annotations
 
 import hashlib
+import math
 import re
 import tomllib
 from dataclasses import dataclass
@@ -26,12 +27,13 @@ if TYPE_CHECKING:
     from collections.abc import Mapping
     from pathlib import Path
 
-    from reconcile.measurement import ColumnSpec
+    from reconcile.measurement import ColumnSpec, Quantity
     from reconcile.toml_lines import KeyPath
 
 __all__ = ["load_case"]
 
 _MAX_DEPTH = 20
+_SIGNED = {"second_virial", "dn_dc", "temperature"}
 _SHARED_KEYS = {"name", "date", "solvent", "temperature", "effects", "readings", "note"}
 
 
@@ -69,12 +71,13 @@ def load_case(
     """
     document = _read_toml(path, path.name)
     problems = [
-        document.problem(fault.path, fault.text, fault.remedy)
-        for fault in validate(document.data, "case-1")
+        *_not_finite(document),
+        *(
+            document.problem(fault.path, fault.text, fault.remedy)
+            for fault in validate(document.data, "case-1")
+        ),
     ]
-    if any("measurement" in p.text for p in problems) or not isinstance(
-        document.data.get("sample"), dict
-    ):
+    if problems and not isinstance(document.data.get("sample"), dict):
         raise InputError(problems)
     schema = load_schema("case-1")
     data = _converted(document.data, schema, (), schema, document, problems)
@@ -159,6 +162,21 @@ def _read_toml(path: Path, shown: str) -> _Document:
     return _Document(shown, _dates_as_text(data), line_map(text), hashlib.sha256(raw).hexdigest())
 
 
+def _not_finite(document: _Document) -> list[Problem]:
+    """Return a problem for every number that is none: TOML knows nan and inf, no quantity does."""
+    found: list[Problem] = []
+    stack: list[tuple[KeyPath, Any]] = [((), document.data)]
+    while stack:
+        path, entry = stack.pop()
+        if isinstance(entry, float) and not math.isfinite(entry):
+            found.append(document.problem(path, f"found {entry}, expected a number"))
+        elif isinstance(entry, dict):
+            stack.extend(((*path, key), child) for key, child in entry.items())
+        elif isinstance(entry, list):
+            stack.extend(((*path, key), child) for key, child in enumerate(entry))
+    return found
+
+
 def _depth(value: Any) -> int:
     deepest, stack = 0, [(value, 1)]
     while stack:
@@ -228,12 +246,31 @@ def _converted(
     try:
         if "x-kind" in schema:
             kinds = schema["x-kind"]
-            return parse_quantity(value, [kinds] if isinstance(kinds, str) else kinds)
+            found = parse_quantity(value, [kinds] if isinstance(kinds, str) else kinds)
+            _check_sign(found)
+            return found
         if "x-uncertainty" in schema:
-            return parse_uncertainty(value, schema["x-uncertainty"])
+            return _checked_uncertainty(value, schema)
     except UnitError as error:
         problems.append(document.problem(path, str(error)))
     return value
+
+
+def _check_sign(found: Quantity) -> None:
+    """Refuse what no quantity of a kind can be."""
+    if found.kind not in _SIGNED and found.value <= 0.0:
+        raise UnitError(f'found "{found.text}", expected more than 0')
+    if found.kind == "dn_dc" and found.value == 0.0:
+        raise UnitError(f'found "{found.text}": without contrast there is no scattering')
+
+
+def _checked_uncertainty(text: str, schema: Mapping[str, Any]) -> Quantity:
+    found = parse_uncertainty(text, schema["x-uncertainty"])
+    if schema.get("x-positive") and found.value == 0.0:
+        raise UnitError(f'found "{text}", expected more than 0; leave it out if it is not known')
+    if found.kind == "ratio" and found.value >= 1.0:
+        raise UnitError(f'found "{text}", expected less than 100 %')
+    return found
 
 
 def _fields(schema: Mapping[str, Any], value: Mapping[str, Any]) -> dict[str, Any]:
@@ -353,9 +390,10 @@ def _check_effects(
     problems: list[Problem],
 ) -> None:
     names = entry.get("effects", [])
-    defined = {*effects, *document.data.get("effects", {})}
+    own = document.data.get("effects", {})
+    defined = sorted({*effects, *(own if isinstance(own, dict) else ())})
     for name in names if isinstance(names, list) else []:
-        if name in defined or not isinstance(name, str):
+        if not isinstance(name, str) or name in defined:
             continue
         near = get_close_matches(name, defined, 1, 0.6)
         remedy = f"did you mean {near[0]!r}?" if near else f"add [effects.{name}], or remove it"

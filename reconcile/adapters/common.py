@@ -33,6 +33,7 @@ __all__ = [
     "Scatter",
     "Solutions",
     "check_columns",
+    "check_reading_error",
     "effect_derivatives",
     "medium_of",
     "power_quantity",
@@ -209,6 +210,27 @@ def scatter_finding(name: str, scatter: Scatter, look_for: str) -> tuple[Finding
         f" (p = {scatter.p_value:.1g})"
     )
     return (Finding("scatter-exceeds-stated", "warning", text, look_for, name),)
+
+
+def check_reading_error(
+    measurement: Measurement, u: float | None, readings: Array, problems: list[Problem]
+) -> None:
+    """Append a problem where a stated reading error cannot be one of these readings.
+
+    ``u`` is in the unit of ``readings``; a relative one comes with readings of 1.
+    """
+    largest = float(max(abs(readings).max(), 1e-300)) if len(readings) else 1.0
+    if u is None or 1e-13 <= u / largest <= 1e2:
+        return
+    text = measurement.fields["u_reading"].text
+    size = "smaller" if u < largest else "larger"
+    problems.append(
+        measurement.place.problem(
+            "u_reading",
+            f'found "{text}", absurdly {size} than the readings',
+            "check its unit, or leave it out: the scatter then sets the scale",
+        )
+    )
 
 
 def solutions(

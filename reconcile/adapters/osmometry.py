@@ -12,6 +12,7 @@ from reconcile.adapters.common import (
     GAS_CONSTANT,
     Adapter,
     check_columns,
+    check_reading_error,
     effect_derivatives,
     medium_of,
     power_quantity,
@@ -102,6 +103,10 @@ def prepare(measurement: Measurement, sample: Sample, effects: Mapping[str, Effe
     solution = solutions(measurement, sample, problems, allow_zero=False)
     weight, constants = _specific_weight(measurement, problems)
     error = _reading_error(measurement, weight, problems)
+    pi = table.columns["pi"] if "pi" in table.columns else table.columns["head"] * weight
+    if not problems:
+        unit = np.ones_like(pi) if error.is_relative else pi
+        check_reading_error(measurement, error.u, unit, problems)
     n_flasks = len(np.unique(solution.c))
     if n_flasks < 2:
         problems.append(
@@ -112,7 +117,6 @@ def prepare(measurement: Measurement, sample: Sample, effects: Mapping[str, Effe
             )
         )
     raise_problems(problems)
-    pi = table.columns["pi"] if "pi" in table.columns else table.columns["head"] * weight
     assert measurement.temperature is not None  # noqa: S101 - the schema requires it
     everything = {**effects, **{effect.id: effect for effect in solution.effects}}
     return Series(

@@ -11,6 +11,7 @@ import numpy as np
 from reconcile.adapters import scattering_fit as sf
 from reconcile.adapters.common import (
     check_columns,
+    check_reading_error,
     medium_of,
     raise_problems,
     size_law_of,
@@ -114,6 +115,8 @@ def prepare(measurement: Measurement, sample: Sample, effects: Mapping[str, Effe
     total = "R_total" in table_of(measurement).columns
     solution = solutions(measurement, sample, problems, allow_zero=total)
     lam, n = _optics(measurement, problems)
+    u_reading = value_of(fields, "u_reading")
+    check_reading_error(measurement, u_reading, np.ones(1), problems)
     same_stock = _same_stock(measurement, effects, problems)
     raise_problems(problems)
     increment, own_effects, constants = _increment(measurement, problems)
@@ -140,7 +143,7 @@ def prepare(measurement: Measurement, sample: Sample, effects: Mapping[str, Effe
         n,
         k,
         _scaled(cells, correction),
-        value_of(fields, "u_reading"),
+        u_reading,
         value_of(fields, "u_concentration") or 0.0,
         all_effects,
         (*measurement.effects, *(e.id for e in own)),

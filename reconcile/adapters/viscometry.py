@@ -11,6 +11,7 @@ import numpy as np
 from reconcile.adapters.common import (
     Adapter,
     check_columns,
+    check_reading_error,
     effect_derivatives,
     medium_of,
     power_quantity,
@@ -102,10 +103,13 @@ def prepare(measurement: Measurement, sample: Sample, effects: Mapping[str, Effe
     y = table.columns[quantity]
     _check_readings(measurement, quantity, problems)
     pair = pair_of(measurement, effects, problems)
+    u_reading = measurement.fields.get("u_reading")
+    if u_reading is not None and not problems:
+        unit = np.ones_like(y) if u_reading.kind == "ratio" else y
+        check_reading_error(measurement, u_reading.value, unit, problems)
     raise_problems(problems)
     is_solvent = solution.c == 0.0
     own = (*solution.effects, *(pair.own_effects if pair is not None else ()))
-    u_reading = measurement.fields.get("u_reading")
     return Series(
         measurement.name,
         medium_of(measurement),
