@@ -21,7 +21,7 @@ from reconcile.measurement import Case, Effect, Measurement, Place, Sample
 from reconcile.schema import load_schema, path_text, validate
 from reconcile.tables import read_bytes, read_table
 from reconcile.toml_lines import line_map, line_of
-from reconcile.units import UnitError, parse_quantity, parse_uncertainty
+from reconcile.units import KINDS, UnitError, parse_quantity, parse_uncertainty
 
 if TYPE_CHECKING:
     from collections.abc import Mapping
@@ -34,6 +34,17 @@ __all__ = ["load_case"]
 
 _MAX_DEPTH = 20
 _SIGNED = {"second_virial", "dn_dc", "temperature"}
+# magnitudes in internal units that nothing in this trade leaves, so that a slip of a power is seen
+_PLAUSIBLE = {
+    "molar_mass": (1.0, 1e12),
+    "viscosity_number": (1e-9, 1e6),
+    "density": (0.1, 25.0),
+    "dn_dc": (1e-4, 2.0),
+    "temperature": (50.0, 1500.0),
+    "acceleration": (1.0, 30.0),
+    "length": (1e-9, 1e6),
+    "second_virial": (0.0, 1e3),
+}
 _SHARED_KEYS = {"name", "date", "solvent", "temperature", "effects", "readings", "note"}
 
 
@@ -260,8 +271,9 @@ def _check_sign(found: Quantity) -> None:
     """Refuse what no quantity of a kind can be."""
     if found.kind not in _SIGNED and found.value <= 0.0:
         raise UnitError(f'found "{found.text}", expected more than 0')
-    if found.kind == "dn_dc" and found.value == 0.0:
-        raise UnitError(f'found "{found.text}": without contrast there is no scattering')
+    low, high = _PLAUSIBLE.get(found.kind, (0.0, math.inf))
+    if not low <= abs(found.value) <= high:
+        raise UnitError(f'found "{found.text}", which no {KINDS[found.kind].title} is')
 
 
 def _checked_uncertainty(text: str, schema: Mapping[str, Any]) -> Quantity:

@@ -27,6 +27,9 @@ _TOLERANCE = 1e-14
 """As tight as the solver takes, so that a change of units upstream changes nothing that is read."""
 
 
+_MAX_EVALUATIONS = 200
+
+
 @dataclass(frozen=True, slots=True, eq=False)
 class NonlinearFit:
     """An optimum: parameters (p,), the Jacobian (n, p) there, the sum of squares.
@@ -92,11 +95,13 @@ def fit(
         xtol=_TOLERANCE,
         ftol=_TOLERANCE,
         gtol=_TOLERANCE,
+        max_nfev=_MAX_EVALUATIONS,
     )
     best = values(found.params)
     slope = jacobian(best)
     misfit = residual(best)
     scale = np.linalg.norm(slope, axis=0)
+    scale = np.where(scale > 0.0, scale, 1.0)
     inverse = np.linalg.pinv(slope / scale)
     return NonlinearFit(
         frozen_array(best),

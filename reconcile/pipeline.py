@@ -113,10 +113,7 @@ def run_case(prepared: Prepared) -> dict[str, Any]:
     reductions, effects = _reduce(prepared)
     evidence = [r.evidence for r in reductions if r.evidence is not None]
     if not evidence:
-        raise EstimateError(
-            f"{case.file}: no measurement has an uncertainty, so none can enter a joint estimate\n"
-            "  state u_reading, or run `reconcile reduce` for the reductions alone"
-        )
+        raise EstimateError(_why_none(case, reductions))
     linked: list[str] = []
     if case.link_virial:
         evidence, links, linked = link_virial(evidence)
@@ -135,6 +132,21 @@ def run_case(prepared: Prepared) -> dict[str, Any]:
             **judgement_part(consistency, free, case.limits, draws),
             "findings": applicability(case, reductions, result, draws) + _links(case, linked),
         }
+    )
+
+
+def _why_none(case: Case, reductions: tuple[Reduction, ...]) -> str:
+    """Return why no measurement can enter the estimate: the first reason, and what to do."""
+    reasons = [
+        f"{reduction.name}: {finding.text}"
+        for reduction in reductions
+        for finding in reduction.findings
+        if finding.code in {"no-uncertainty", "no-intercept"}
+    ]
+    more = f" (and {len(reasons) - 1} more)" if len(reasons) > 1 else ""
+    return (
+        f"{case.file}: no measurement can enter a joint estimate\n"
+        f"  {reasons[0]}{more}\n  `reconcile reduce` shows the reductions alone"
     )
 
 

@@ -36,6 +36,7 @@ _BRACKET = re.compile(r"^\s*(.+?)\s*\[([^\[\]]*)\]\s*$")
 _SLASH = re.compile(r"^\s*(.+?)\s*/\s*(?:\((.+)\)|(\S.*))\s*$")
 _ROUND = re.compile(r"^\s*(.+?)\s+\((.*)\)\s*$")
 _COMMA = re.compile(r"^\s*(.+?)\s*(?:,|\s+in\s)\s*(\S.*)\s*$")
+_THOUSANDS = re.compile(r"[+-]?[1-9]\d{0,2},\d{3}")
 _IGNORED = re.compile(r"^\s*(note|comment|remark)s?\b", re.IGNORECASE)
 
 
@@ -255,4 +256,8 @@ def _has_decimal_comma(
     if any(cell.count(",") > 1 for _, cell in commas):
         number, cell = next(place for place in commas if place[1].count(",") > 1)
         raise InputError([Problem(shown, number, "", f"found {cell!r}, expected a number")])
+    if commas and all(_THOUSANDS.fullmatch(cell) for _, cell in commas):
+        number, cell = commas[0]
+        found = f"found {cell!r}: a decimal comma or a thousands mark?"
+        raise InputError([Problem(shown, number, "", found, "write a decimal point")])
     return bool(commas)

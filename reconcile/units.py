@@ -120,7 +120,7 @@ KINDS: Mapping[str, Kind] = MappingProxyType(
 
 _CELSIUS = {"°C", "degC", "deg C", "C", "℃"}
 _ANGLE_UNITS = {"deg", "rad"}
-_NUMBER = re.compile(r"[+-]?(?:\d+(?:\.\d*)?|\.\d+)(?:[eE][+-]?\d+)?")
+_NUMBER = re.compile(r"[+-]?(?:\d+(?:\.\d*)?|\.\d+)(?:[eE][+-]?\d+)?", re.ASCII)
 _SUPERSCRIPT = str.maketrans("⁰¹²³⁴⁵⁶⁷⁸⁹⁻", "0123456789-")
 _HUNDRED = re.compile(r"/\s*\(?\s*100\s*(?:mL|ml|cm\^?3)\s*\)?(?!\w)")
 _BRACKETS = re.compile(r"/\s*\(([^()/]+)\)")

@@ -49,6 +49,9 @@ __all__ = [
 GAS_CONSTANT = 8.314462618
 """R in J/(mol K): CODATA 2018, exact by the SI (8.31446261815324)."""
 
+_MOST_CONCENTRATED, _MOST_DILUTE = 1.0, 1e-8
+"""g/mL; beyond them a concentration is a slip of a power of ten."""
+
 PRIOR_DOF = 3.0
 """ν₀ of the scaled-inverse-χ² prior on the scatter, centred on the stated reading error."""
 
@@ -194,16 +197,16 @@ def table_of(measurement: Measurement) -> Table:
     return measurement.table
 
 
-def scatter_finding(name: str, scatter: Scatter, look_for: str) -> tuple[Finding, ...]:
-    """Return what the scatter says against a stated reading error; nothing where it agrees.
-
-    A NaN p-value means that none was stated.
-    """
-    if math.isnan(scatter.p_value):
+def scatter_finding(
+    name: str, scatter: Scatter, look_for: str, *, stated: bool
+) -> tuple[Finding, ...]:
+    """Return what the scatter says against a stated reading error; nothing where it agrees."""
+    if not stated:
         text = "no reading error was stated: the scatter of the readings sets the scale"
         remedy = "state u_reading, from repeated readings"
         return (Finding("no-stated-error", "note", text, remedy, name),)
-    if scatter.p_value >= 0.01:
+    # without degrees of freedom there is no p-value, and nothing to say
+    if not scatter.p_value < 0.01:
         return ()
     text = (
         f"readings scatter {math.sqrt(scatter.ratio):.2g} times as much as stated"
@@ -248,6 +251,14 @@ def solutions(
         if value < 0.0 or (value == 0.0 and not allow_zero):
             expected = "0 (solvent) or more" if allow_zero else "more than 0"
             problems.append(table.problem(row, "c", f"found {value:g}, expected {expected}"))
+    largest = float(nominal.max()) if len(nominal) else 0.0
+    if largest > _MOST_CONCENTRATED:
+        row = int(nominal.argmax())
+        found = f"found {largest:g} g/mL, more than any solution holds"
+        problems.append(table.problem(row, "c", found, "is the heading's unit right?"))
+    elif 0.0 < largest < _MOST_DILUTE:
+        found = f"found at most {largest:g} g/mL, too little for any of these methods"
+        problems.append(table.problem(0, "c", found, "is the heading's unit right?"))
     factor, assumptions = sample.solids, []
     if sample.solids != 1.0:
         assumptions.append(f"concentrations multiplied by the dry fraction {sample.solids:g}")

@@ -15,7 +15,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from reconcile.adapters.common import Scatter
-from reconcile.evidence import frozen_array
+from reconcile.evidence import Finding, frozen_array
 from reconcile.nonlinear import fit
 
 if TYPE_CHECKING:
@@ -26,9 +26,20 @@ if TYPE_CHECKING:
     Array = NDArray[np.float64]
     Model = Callable[[Array, Array], tuple[Array, Array, Array]]
 
-__all__ = ["FlaskFit", "Flasks", "Prior", "ReadingError", "fit_flasks", "group_flasks"]
+__all__ = [
+    "NO_SCATTER",
+    "FlaskFit",
+    "Flasks",
+    "Prior",
+    "ReadingError",
+    "fit_flasks",
+    "group_flasks",
+    "unknown_finding",
+]
 
 _PASSES = 3
+_NO_SCATTER2 = 1e-20
+"""Scatter over the mean reading, squared, below which it is rounding; only without stated error."""
 _NODES, _REACH, _STEPS = 31, 4.0, 5
 
 
@@ -145,21 +156,35 @@ def fit_flasks(  # noqa: PLR0913 - a fit is its data, model, start and priors
         sd = _sd(flasks, error, u_flask, model, values)
         misfit = (flasks.mean - model(values, flasks.c)[0]) / sd
         scatter = Scatter.of(float(misfit @ misfit) + flasks.within, dof, stated=stated)
-        if not math.isfinite(scatter.scale2):
+        # readings on the curve to the last digit tell as little of their errors as too few do
+        is_known = math.isfinite(scatter.scale2) and scatter.scale2 > _NO_SCATTER2
+        if not is_known:
             covariance = np.full_like(covariance, np.nan)
             break
-        # readings on the curve to the last bit have no scatter; keep the weights finite
-        scale2 = max(scatter.scale2, 1e-24)
-    if not bound and math.isfinite(scatter.scale2):
+        scale2 = scatter.scale2
+    if not bound and is_known:
         sd = _sd(flasks, error, u_flask, model, values) * math.sqrt(scale2)
-        values, covariance = _marginalised(flasks, model, (values, covariance), sd, priors, fixed)
+        values, covariance = _marginalised(
+            flasks, model, (values, covariance, np.abs(start)), sd, priors, fixed
+        )
     return FlaskFit(frozen_array(values), frozen_array(covariance), scatter, bound)
+
+
+NO_SCATTER = "no reading error was stated and there is no scatter to learn it from"
+
+
+def unknown_finding(name: str, fitted: FlaskFit) -> tuple[Finding, ...]:
+    """Return the finding of a series whose readings tell nothing of their errors."""
+    if fitted.is_known:
+        return ()
+    text = f"{NO_SCATTER}: the numbers stand without uncertainty and stay out of the estimate"
+    return (Finding("no-uncertainty", "warning", text, "state u_reading", name),)
 
 
 def _marginalised(
     flasks: Flasks,
     model: Model,
-    mode: tuple[Array, Array],
+    mode: tuple[Array, Array, Array],
     sd: Array,
     priors: Sequence[Prior],
     fixed: int,
@@ -172,7 +197,7 @@ def _marginalised(
     exp(−Q/2)/√det(JᵀJ). The mode alone is biased where that parameter bends the others: for the
     polycarbonate table of the tests by 0.4 standard uncertainties of 1/Mn.
     """
-    at, covariance = mode
+    at, covariance, unit = mode
     moving = priors[0].index
     spread = math.sqrt(covariance[moving, moving])
     free = [k for k in range(fixed, len(at)) if k != moving]
@@ -190,12 +215,12 @@ def _marginalised(
             for prior in rows:
                 jacobian = np.vstack([jacobian, np.eye(len(at))[prior.index, free] / prior.sd])
                 misfit = np.append(misfit, (prior.mean - values[prior.index]) / prior.sd)
-            step, *_ = np.linalg.lstsq(jacobian * at[free], misfit, rcond=None)
-            values[free] += step * at[free]
+            step, *_ = np.linalg.lstsq(jacobian * unit[free], misfit, rcond=None)
+            values[free] += step * unit[free]
         off = (values[moving] - priors[0].mean) / priors[0].sd
-        scaled = jacobian * at[free]
+        scaled = jacobian * unit[free]
         points.append(values)
-        parts.append(np.linalg.inv(scaled.T @ scaled) * np.outer(at[free], at[free]))
+        parts.append(np.linalg.pinv(scaled.T @ scaled) * np.outer(unit[free], unit[free]))
         _, ln_det = np.linalg.slogdet(scaled.T @ scaled)
         ln_weights.append(-0.5 * (float(misfit @ misfit) + off**2 + ln_det))
     weight = np.exp(np.array(ln_weights) - max(ln_weights))

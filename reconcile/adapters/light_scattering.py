@@ -47,40 +47,48 @@ _CM_TO_NM = 1e7
 def reduce(series: Series) -> Reduction:
     """Return Mw, A2 and Rg with their evidence, alternatives and findings."""
     fit = sf.fit_surface(series.cells, series.u_reading, series.u_flask)
+    alternatives = _alternatives(series.cells)
+    common: dict[str, Any] = {
+        "name": series.name,
+        "technique": "light_scattering",
+        "form": "Zimm surface, shared errors averaged, third virial term by prior",
+        "alternatives": alternatives,
+        "constants": _constants(series),
+        "assumptions": series.assumptions,
+    }
+    if fit is None:
+        why = "the readings have no positive intercept at c = 0 and zero angle"
+        remedy = "check blank, dust and angles; see the other forms"
+        found = Finding("no-intercept", "warning", why, remedy, series.name)
+        return Reduction(
+            **common,
+            quantities={"Mw": QuantityValue(None, "g/mol", why=why)},
+            evidence=None,
+            findings=(*series.findings, found),
+        )
     rows, values, covariance, dof = _rows(series, fit)
     quantities = _quantities(series, rows, values, covariance, dof)
-    alternatives = _alternatives(series.cells)
-    findings = [*series.findings, *_findings(series, fit, quantities, alternatives)]
     law = series.size_law
     own = list(series.own_effects)
     if law is not None and law.u_K > 0.0:
         own.append(Effect(f"{slug(series.name)}_size_law", "size_law", law.u_K, law.source))
     return Reduction(
-        series.name,
-        "light_scattering",
-        "Zimm surface, shared errors averaged, third virial term by prior",
-        quantities,
-        Evidence(series.name, rows, frozen_array(values), frozen_array(covariance)),
-        alternatives,
-        tuple(findings),
-        (),
-        _readings(series, fit),
-        _fit_summary(fit),
-        series.constants
-        if series.optical_constant is None
-        else (
-            *series.constants,
-            Constant(
-                "K*",
-                series.optical_constant,
-                "mol cm²/g²",
-                "4π²n²(dn/dc)²/(N_A λ⁴)",
-                "computed",
-            ),
-        ),
-        series.assumptions,
-        tuple(own),
+        **common,
+        quantities=quantities,
+        evidence=Evidence(series.name, rows, frozen_array(values), frozen_array(covariance)),
+        findings=(*series.findings, *_findings(series, fit, quantities, alternatives)),
+        readings=_readings(series, fit),
+        fit=_fit_summary(fit),
+        effects=tuple(own),
     )
+
+
+def _constants(series: Series) -> tuple[Constant, ...]:
+    if series.optical_constant is None:
+        return series.constants
+    formula = "4π²n²(dn/dc)²/(N_A λ⁴), half of it for unpolarised light"
+    computed = Constant("K*", series.optical_constant, "mol cm²/g²", formula, "computed")
+    return (*series.constants, computed)
 
 
 def _rows(series: Series, fit: sf.SurfaceFit) -> tuple[tuple[Row, ...], Array, Array, Array]:
@@ -226,7 +234,9 @@ def _findings(
     alternatives: tuple[Alternative, ...],
 ) -> list[Finding]:
     look_for = "look for dust, a bad cell or a wrong u_reading"
-    found = list(scatter_finding(series.name, fit.scatter, look_for))
+    found = list(
+        scatter_finding(series.name, fit.scatter, look_for, stated=series.u_reading is not None)
+    )
 
     def add(code: str, severity: str, text: str, remedy: str) -> None:
         found.append(Finding(code, severity, text, remedy, series.name))

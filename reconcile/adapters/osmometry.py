@@ -22,7 +22,15 @@ from reconcile.adapters.common import (
     table_of,
     value_of,
 )
-from reconcile.adapters.flask_fit import FlaskFit, Prior, ReadingError, fit_flasks, group_flasks
+from reconcile.adapters.flask_fit import (
+    NO_SCATTER,
+    FlaskFit,
+    Prior,
+    ReadingError,
+    fit_flasks,
+    group_flasks,
+    unknown_finding,
+)
 from reconcile.evidence import (
     Alternative,
     Constant,
@@ -104,6 +112,12 @@ def prepare(measurement: Measurement, sample: Sample, effects: Mapping[str, Effe
     weight, constants = _specific_weight(measurement, problems)
     error = _reading_error(measurement, weight, problems)
     pi = table.columns["pi"] if "pi" in table.columns else table.columns["head"] * weight
+    if not problems and not (pi > 0.0).any():
+        problems.append(
+            measurement.place.problem(
+                "readings", "found no pressure above 0", "is the sign of the readings turned?"
+            )
+        )
     if not problems:
         unit = np.ones_like(pi) if error.is_relative else pi
         check_reading_error(measurement, error.u, unit, problems)
@@ -267,17 +281,14 @@ def _rows(series: Series, virial: FlaskFit) -> tuple[Row, ...]:
     )
 
 
-_UNKNOWN = "no reading error was stated and there is no scatter to learn it from"
-
-
 def _quantities(
     series: Series, virial: FlaskFit, rows: tuple[Row, ...]
 ) -> dict[str, QuantityValue]:
     i, a2, g = (float(x) for x in virial.values)
     if not virial.is_known:
         return {
-            "Mn": QuantityValue(1.0 / i, "g/mol", why=_UNKNOWN),
-            "A2": QuantityValue(a2, "mol mL/g²", why=_UNKNOWN),
+            "Mn": QuantityValue(1.0 / i, "g/mol", why=NO_SCATTER),
+            "A2": QuantityValue(a2, "mol mL/g²", why=NO_SCATTER),
         }
     sd = np.sqrt(np.diag(virial.covariance))
 
@@ -352,7 +363,10 @@ def _from_line(
 def _findings(
     series: Series, virial: FlaskFit, alternatives: tuple[Alternative, ...]
 ) -> list[Finding]:
-    found = list(scatter_finding(series.name, virial.scatter, "look for drift, leaks, a bad flask"))
+    look_for = "look for drift, leaks, a bad flask"
+    stated = series.error.u is not None
+    found = list(scatter_finding(series.name, virial.scatter, look_for, stated=stated))
+    found += unknown_finding(series.name, virial)
 
     def add(code: str, severity: str, text: str, remedy: str) -> None:
         found.append(Finding(code, severity, text, remedy, series.name))
@@ -365,6 +379,10 @@ def _findings(
     if top > 1.0:
         text = f"A2·Mn·c reaches {top:.2g}; terms beyond the third virial one matter there"
         add("concentrations-too-high", "warning", text, "measure lower concentrations")
+    a2, u_a2 = float(virial.values[1]), math.sqrt(virial.covariance[1, 1])
+    if a2 < -2.0 * u_a2:
+        text = "A2 is negative: a poor solvent, association, or drift over the series"
+        add("negative-a2", "caution", text, "change temperature or solvent; read in reverse order")
     n_flasks = len(np.unique(series.c))
     if n_flasks < 4:
         text = f"{n_flasks} concentrations leave little to check the extrapolation with"

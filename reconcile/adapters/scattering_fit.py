@@ -33,6 +33,9 @@ VIRIAL_RATIO_PRIOR = (0.25, 0.2)
 SHARED_ERROR_PRIOR = 0.02
 """Scale of the half-normal priors on the two shared relative errors."""
 
+_LEAST_ERROR = 1e-6
+"""Least relative error of one reading that the arithmetic is asked to tell apart."""
+
 _SHARED_NODES = 6
 _PASSES = 3
 _STEPS = 5
@@ -147,8 +150,10 @@ def double_extrapolation(cells: Cells) -> tuple[float, float, float] | None:
     return float(intercept), float(slope_c / 2.0), float(3.0 * slope / intercept)
 
 
-def fit_surface(cells: Cells, u_reading: float | None, u_flask: float) -> SurfaceFit:
+def fit_surface(cells: Cells, u_reading: float | None, u_flask: float) -> SurfaceFit | None:
     """Fit the surface to all cells at once, averaged over the sizes of the shared errors.
+
+    None where the readings have no positive intercept.
 
     Parameters
     ----------
@@ -181,8 +186,15 @@ def fit_surface(cells: Cells, u_reading: float | None, u_flask: float) -> Surfac
     for _ in range(_PASSES):
         # the weights follow the fitted readings, the fit follows the weights
         scatter = _reading_scatter(cells, mean, u_reading)
-        sigma = unit * float(np.sqrt(scatter.scale2))
-        mean, covariance, dof, weight = _averaged(cells, mean, tau, sigma, u_flask)
+        # readings on the surface to the last digit still leave the shared errors open
+        sigma = max(unit * float(np.sqrt(scatter.scale2)), _LEAST_ERROR)
+        with np.errstate(over="ignore", invalid="ignore", divide="ignore"):
+            try:
+                mean, covariance, dof, weight = _averaged(cells, mean, tau, sigma, u_flask)
+            except np.linalg.LinAlgError:
+                return None
+        if not (np.isfinite(mean).all() and np.isfinite(covariance).all() and mean[0] > 0.0):
+            return None
     shared = weight @ tau
     shrink = np.sqrt((dof - 2.0) / dof)
     return SurfaceFit(

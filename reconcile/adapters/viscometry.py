@@ -21,7 +21,15 @@ from reconcile.adapters.common import (
     table_of,
     value_of,
 )
-from reconcile.adapters.flask_fit import FlaskFit, Prior, ReadingError, fit_flasks, group_flasks
+from reconcile.adapters.flask_fit import (
+    NO_SCATTER,
+    FlaskFit,
+    Prior,
+    ReadingError,
+    fit_flasks,
+    group_flasks,
+    unknown_finding,
+)
 from reconcile.adapters.mark_houwink import Pair, molar_mass, pair_of, range_finding
 from reconcile.evidence import (
     Alternative,
@@ -60,8 +68,6 @@ CUBIC_PRIOR = (0.5, 0.5)
 
 HUGGINS_PRIOR = (0.40, 0.20)
 """Mean and sd of k_H where fewer than three concentrations cannot show it."""
-
-_UNKNOWN = "no reading error was stated and there is no scatter to learn it from"
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -199,6 +205,7 @@ def _fit(series: Series) -> FlaskFit:
         start,
         priors,
         fixed=0 if has_solvent else 1,
+        lower=1e-3 if has_solvent else -math.inf,
     )
 
 
@@ -256,8 +263,8 @@ def _quantities(curve: FlaskFit, pair: Pair | None, u_shared: float) -> dict[str
             huggins, sd[2], nu, power=1.0, factor=1.0, unit="1", u_effects=0.0
         )
     else:
-        number = QuantityValue(eta, "mL/g", why=_UNKNOWN)
-        constant = QuantityValue(huggins, "1", why=_UNKNOWN)
+        number = QuantityValue(eta, "mL/g", why=NO_SCATTER)
+        constant = QuantityValue(huggins, "1", why=NO_SCATTER)
     found = {"limiting_viscosity_number": number, "huggins_constant": constant}
     if pair is not None:
         found["Mv"] = molar_mass(pair, number)
@@ -286,6 +293,12 @@ def _line(c: Array, y: Array, label: str, sign: float) -> dict[str, QuantityValu
     """Return [η] and the slope's constant of y = [η] ± k[η]²c by equal weights."""
     fitted = least_squares(np.column_stack([np.ones_like(c), c]), y)
     eta, slope = (float(x) for x in fitted.coefficients)
+    if eta == 0.0:
+        why = "the line meets the axis at 0"
+        return {
+            "limiting_viscosity_number": QuantityValue(eta, "mL/g", why=why),
+            label: QuantityValue(None, "1", why=why),
+        }
     constant = sign * slope / eta**2
     if fitted.dof < 1:
         why = "as many readings as unknowns"
@@ -330,17 +343,14 @@ def _findings(
     alternatives: tuple[Alternative, ...],
 ) -> list[Finding]:
     look_for = "look for dust, temperature, a bad flask"
-    found: list[Finding] = []
-    if curve.is_known:
-        found += scatter_finding(series.name, curve.scatter, look_for)
+    stated = series.error.u is not None
+    found = list(scatter_finding(series.name, curve.scatter, look_for, stated=stated))
+    found += unknown_finding(series.name, curve)
 
     def add(code: str, severity: str, text: str, remedy: str) -> None:
         found.append(Finding(code, severity, text, remedy, series.name))
 
     n_flasks = len(np.unique(series.c))
-    if not curve.is_known:
-        text = f"{_UNKNOWN}: the numbers stand without uncertainty and stay out of the estimate"
-        add("no-uncertainty", "warning", text, "state u_reading")
     if n_flasks < 3:
         text = (
             f"{n_flasks} concentration(s) cannot show the Huggins constant: it is taken as"

@@ -76,7 +76,7 @@ def predict(system: System, family: Family, t: Array, z: Array) -> Predicted:
             gradient[:, i, 1 + n_effects + k] = row.d_delta
             curvature[:, i] = row.d2_delta
     # a trial step may run far off; its Q is then huge, not infinite
-    return Predicted(np.exp(np.clip(ln_f, -690.0, 690.0)), gradient, curvature)
+    return Predicted(np.exp(np.clip(ln_f, -150.0, 150.0)), gradient, curvature)
 
 
 def objective(system: System, data: NodeData, z: Array, predicted: Predicted) -> Array:
@@ -120,6 +120,11 @@ def _start(system: System, family: Family, t: Array, data: NodeData) -> Array:
     cholesky = np.linalg.inv(data.whitener)
     spread = np.sqrt(np.einsum("tik,tik->ti", cholesky, cholesky))
     usable = (values > 0.0) & (np.abs(order) > 1e-9)
+    if not (np.abs(order) > 1e-9).any():
+        raise EstimateError(
+            "no measurement fixes the scale of molar mass\n"
+            "  a dispersity alone does not: give Mn, Mw, or [η] with Mark-Houwink constants"
+        )
     if not usable.any(axis=1).all():
         raise EstimateError(
             "no measurement yields a positive average\n"
@@ -133,6 +138,23 @@ def _start(system: System, family: Family, t: Array, data: NodeData) -> Array:
 
 
 def solve(system: System, family: Family, t: Array) -> NodeSolution:
+    """Return the modes and integrated likelihoods at the nodes ``t``; see `_solve`.
+
+    Raises
+    ------
+    EstimateError
+        If there is nothing to start from, or the equations are singular.
+    """
+    try:
+        return _solve(system, family, t)
+    except np.linalg.LinAlgError as error:
+        raise EstimateError(
+            "the measurements leave the joint equations singular\n"
+            "  an extrapolated value is not resolved from zero: see the reductions"
+        ) from error
+
+
+def _solve(system: System, family: Family, t: Array) -> NodeSolution:
     """Return the modes and integrated likelihoods at the nodes ``t``.
 
     Raises

@@ -44,6 +44,9 @@ _PROFILE_T, _PROFILE_X = 201, 401
 _DEPTH = 22.0
 """ln-likelihood below its maximum at which the refined grid ends."""
 
+_LARGEST = float(np.log(1e15))
+"""ln of a molar mass in g/mol beyond which an end is no end."""
+
 _SETTLED = 0.01
 """Change of ln(average) per unit of t at the end of the grid below which it counts as settled."""
 
@@ -338,17 +341,19 @@ def _profile(
             lower = None
         if rises and where[inside[-1]] == len(t) - 1:
             upper = None
-        ends[key] = (
-            None if lower is None else float(np.exp(lower)),
-            None if upper is None else float(np.exp(upper)),
-        )
+        ends[key] = (_exp(lower), _exp(upper))
     return Statement(
-        float(np.exp(x[int(np.argmax(profile))])),
+        _exp(float(x[int(np.argmax(profile))])),
         ends["interval68"],
         ends["interval95"],
         reading_of(*ends["interval95"]),
         dof,
     )
+
+
+def _exp(x: float | None) -> float | None:
+    """Return exp(x); None for no end, and for one beyond any molar mass."""
+    return None if x is None or x > _LARGEST else float(np.exp(x))
 
 
 def _conditional(

@@ -103,7 +103,11 @@ def _family_draws(
     measure = np.where(
         nodes.t <= np.log(PRIOR_MAX_DISPERSITY - 1.0), step / (1.0 + np.exp(-nodes.t)), 0.0
     )
-    mass = np.exp(nodes.ln_likelihood - nodes.ln_likelihood.max()) * measure
+    if not (measure > 0.0).any():
+        # readings that put all the mass beyond the prior's end still get draws, of themselves
+        measure = step
+    ln_l = np.where(measure > 0.0, nodes.ln_likelihood, -np.inf)
+    mass = np.exp(ln_l - ln_l.max()) * measure
     index = np.sort(rng.choice(len(mass), size=count, p=mass / mass.sum()))
     cholesky = np.linalg.cholesky(np.linalg.inv(nodes.hessian))[index]
     normal = rng.standard_normal((count, system.n_inner))
@@ -112,7 +116,7 @@ def _family_draws(
     data = system.data(family, t)
     q = objective(system, data, z, predict(system, family, t, z))
     ln_weight = -0.5 * (q - nodes.q[index]) + 0.5 * (normal**2).sum(1)
-    mw = np.exp(z[:, 0])
+    mw = np.exp(np.clip(z[:, 0], -150.0, 150.0))
     dispersity = 1.0 + np.exp(t)
     mz = mw * np.exp(family.log_moment(2.0, t).value)
     return ln_weight, {"Mn": mw / dispersity, "Mw": mw, "Mz": mz, "dispersity": dispersity}
