@@ -437,3 +437,28 @@ def test_every_command_is_in_the_readme(command):
     assert f"reconcile {command}" in readme
     assert command in run_cli("--help").stdout
     assert run_cli(command, "-h").exit_code == 0
+
+
+@pytest.mark.parametrize(
+    ("path", "value"),
+    [
+        (("consistency",), None),
+        (("consistency", "chi2"), None),
+        (("consistency", "residuals"), []),
+        (("limits", 0, "probability_met"), None),
+        (("measurements", 0, "quantities"), {}),
+        (("measurements", 0, "readings", 0, "values"), [1, 2]),
+        (("estimate", "self_check", "effective_fraction"), None),
+        (("estimate", "budget"), []),
+        (("estimate", "averages", "Mn", "value"), None),
+    ],
+)
+def test_a_result_that_was_tampered_with_is_refused_or_drawn(tmp_path, demo, path, value):
+    document = json.loads(json.dumps(demo))
+    parent = document
+    for key in path[:-1]:
+        parent = parent[key]
+    parent[path[-1]] = value
+    (tmp_path / "result.json").write_text(json.dumps(document))
+
+    assert run_cli("report", tmp_path / "result.json", "-v").exit_code in {0, 3}

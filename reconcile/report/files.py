@@ -102,6 +102,12 @@ def load_result(path: Path) -> dict[str, Any]:
         Problem(shown, 0, entry.place, entry.text, entry.remedy)
         for entry in validate(document, "result-1")
     ]
+    if not problems:
+        problems = [
+            Problem(shown, 0, f"measurements[{i}].readings", "columns of different lengths")
+            for i, entry in enumerate(document["measurements"])
+            if len({len(column["values"]) for column in entry["readings"]}) > 1
+        ]
     if problems:
         raise InputError(problems[:10])
     assert isinstance(document, dict)  # noqa: S101 - the schema has said so

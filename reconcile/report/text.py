@@ -119,6 +119,8 @@ class _Page:
 
     def table(self, rows: Sequence[Sequence[str]], indent: int = 2) -> None:
         """Add rows of cells; the last column wraps within what is left of the width."""
+        if not rows:
+            return
         widths = [max(len(row[i]) for row in rows) for i in range(len(rows[0]) - 1)]
         start = indent + sum(widths) + 2 * len(widths)
         for row in rows:
@@ -193,8 +195,9 @@ def _answer_row(label: str, entry: Mapping[str, Any]) -> tuple[str, str, str]:
         return label, interval, "(95 %)"
     # a closed interval has both ends; its half width over 1.96 sets the digits of the value
     half = (high - low) / 3.92 if low is not None and high is not None else None
-    value = value_text(entry["value"] * factor, half).split(" ±")[0].strip("(")
-    return label, f"{value} {unit}".strip(), f"95 %: {interval}"
+    value = None if entry["value"] is None else entry["value"] * factor
+    shown = value_text(value, half).split(" ±")[0].strip("(")
+    return label, f"{shown} {unit}".strip(), f"95 %: {interval}"
 
 
 def _size(entry: Mapping[str, Any]) -> float | None:
