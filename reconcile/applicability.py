@@ -31,7 +31,7 @@ def applicability(
     case: Case, reductions: Sequence[Reduction], result: JointEstimate, draws: Draws
 ) -> list[dict[str, Any]]:
     """Return the findings after the estimate, as plain values."""
-    found = [*_sample(case), *_self_check(draws)]
+    found = [*_sample(case), *_unused(case), *_self_check(draws)]
     for measurement, reduction in zip(case.measurements, reductions, strict=True):
         if measurement.technique == "osmometry":
             found += _osmometry(measurement, reduction, result)
@@ -72,16 +72,27 @@ def _sample(case: Case) -> list[Finding]:
     return found
 
 
+def _unused(case: Case) -> list[Finding]:
+    """Return a finding for effects that no measurement lists: they widen nothing."""
+    used = {key for measurement in case.measurements for key in measurement.effects}
+    idle = sorted(set(case.effects) - used)
+    if not idle:
+        return []
+    text = f"no measurement lists the effect{'s' if len(idle) > 1 else ''} {', '.join(idle)}"
+    return [Finding("unused-effect", "caution", text, "add to effects = […] where it acts")]
+
+
 def _self_check(draws: Draws) -> list[Finding]:
     if draws.passed:
         return []
     return [
         Finding(
             "self-check",
-            "warning",
-            f"the numerical self-check failed (effective fraction {draws.effective_fraction:.2g}):"
-            " intervals may be off by more than the last digit",
-            "report the case to the maintainers with its result document",
+            "caution",
+            "the importance draws spread more than the normal law they check"
+            f" (effective fraction {draws.effective_fraction:.2g}): intervals of molar masses may"
+            " be off by a few per cent of their width",
+            "more precise readings remove it; the dispersity's interval does not rest on it",
         )
     ]
 

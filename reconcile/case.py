@@ -18,7 +18,7 @@ from typing import TYPE_CHECKING, Any
 
 from reconcile.errors import InputError, Problem
 from reconcile.measurement import Case, Effect, Measurement, Place, Sample
-from reconcile.schema import load_schema, path_text, validate
+from reconcile.schema import as_toml, load_schema, path_text, validate
 from reconcile.tables import read_bytes, read_table
 from reconcile.toml_lines import line_map, line_of
 from reconcile.units import KINDS, UnitError, parse_quantity, parse_uncertainty
@@ -263,7 +263,9 @@ def _converted(
         if "x-uncertainty" in schema:
             return _checked_uncertainty(value, schema)
     except UnitError as error:
-        problems.append(document.problem(path, str(error)))
+        examples = schema.get("examples", [])
+        remedy = f"for example: {path[-1]} = {as_toml(examples[0])}" if examples else ""
+        problems.append(document.problem(path, str(error), remedy))
     return value
 
 

@@ -69,7 +69,7 @@ _OUT = click.option(
     "--out", type=click.Path(path_type=Path, file_okay=False), help="Folder to write the files to."
 )
 _VERBOSE = click.option(
-    "-v", "--verbose", is_flag=True, help="Also readings, budget, alternatives."
+    "-v", "--verbose", is_flag=True, help="Also readings and the uncertainty budget."
 )
 
 _CONTRADICTIONS = {"contradiction likely", "contradiction"}

@@ -129,7 +129,7 @@ def run_case(prepared: Prepared) -> dict[str, Any]:
         {
             **reductions_part(case, reductions, effects, _software()),
             "estimate": estimate_part(result, targets, draws),
-            **judgement_part(consistency, free, case.limits, draws),
+            **judgement_part(consistency, free, case.limits, result, draws),
             "findings": applicability(case, reductions, result, draws) + _links(case, linked),
         }
     )
@@ -198,7 +198,9 @@ def _defaults(measurement: Measurement) -> list[str]:
 def describe(prepared: Prepared) -> tuple[str, list[dict[str, Any]]]:
     """Return what `check` prints: a head line, and per measurement what will be used."""
     case = prepared.case
-    head = f"{case.sample.name} – {case.sample.polymer} ({case.file}, {len(case.inputs)} file(s))"
+    head = (
+        f"{case.sample.name} – {case.sample.polymer} ({case.file}, {len(case.inputs)} files read)"
+    )
     summary = []
     for measurement, series in zip(case.measurements, prepared.series, strict=True):
         lines = []
@@ -217,7 +219,7 @@ def describe(prepared: Prepared) -> tuple[str, list[dict[str, Any]]]:
             lines.append("no u_reading: the scatter of the readings will set the scale")
         for key in measurement.effects:
             effect = case.effects[key]
-            lines.append(f"effect {key}: {effect.target}, u = {effect.u:.4g}")
+            lines.append(f"effect {key}: {effect.target}, u = {100.0 * effect.u:.3g} %")
         lines += [f"assumed: {text}" for text in series.assumptions]
         title = f"{measurement.name} ({measurement.technique.replace('_', ' ')})"
         summary.append({"title": title, "lines": lines})

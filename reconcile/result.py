@@ -232,7 +232,7 @@ def estimate_part(result: JointEstimate, targets: Sequence[Target], draws: Draws
             if target.kind == "Mv"
         ],
         "ln_likelihood_ratio_uniform": _number(result.ln_likelihood_ratio_uniform),
-        "budget": _budget(result),
+        "budget": _budget(result) if result.dispersity.reading == "interval" else [],
         "self_check": {
             "effective_fraction": _number(draws.effective_fraction),
             "pareto_k": _number(draws.pareto_k),
@@ -278,10 +278,12 @@ def judgement_part(
     consistency: Consistency,
     free: FamilyFree,
     limits: Mapping[str, tuple[float | None, float | None]],
+    result: JointEstimate,
     draws: Draws,
 ) -> dict[str, Any]:
     """Return the parts of the document that judge: consistency, family-free bounds, limits.
 
+    A limit on a side where the data have no end is not decided by them: its probability is null.
     ``p_no_fault``, ``explanations`` and ``blind_spots`` are null: not assessed.
     """
     return {
@@ -308,8 +310,19 @@ def judgement_part(
             {
                 "quantity": name,
                 "limit": _ends(limit),
-                "probability_met": _number(draws.probability(name, *limit)),
+                "probability_met": _number(draws.probability(name, *limit))
+                if _decided(result, name, limit)
+                else None,
             }
             for name, limit in limits.items()
         ],
     }
+
+
+def _decided(result: JointEstimate, name: str, limit: tuple[float | None, float | None]) -> bool:
+    """Return whether the data bound the quantity on every side that the limit asks about."""
+    statement = result.dispersity if name == "dispersity" else result.averages[name]
+    low, high = statement.interval95
+    # a dispersity has 1 as its lower end, whatever the data say
+    open_low = low is None and name != "dispersity"
+    return not (limit[0] is not None and open_low) and not (limit[1] is not None and high is None)

@@ -99,7 +99,7 @@ def _explain(error: ValidationError) -> Iterator[SchemaFault]:
         key = next(k for k in missing if broken.message.startswith(repr(k)))
         yield SchemaFault(broken.path, f"{key!r} is missing", _hint(broken.schema, key))
     else:
-        yield SchemaFault(broken.path, _sentence(broken))
+        yield SchemaFault(broken.path, _sentence(broken), _example(broken))
 
 
 def _unknown(error: _Broken) -> Iterator[SchemaFault]:
@@ -118,7 +118,29 @@ def _unknown(error: _Broken) -> Iterator[SchemaFault]:
 def _hint(schema: dict[str, Any], key: str) -> str:
     entry = schema.get("properties", {}).get(key, {})
     examples = entry.get("examples")
-    return f"for example: {key} = {json.dumps(examples[0], ensure_ascii=False)}" if examples else ""
+    return f"for example: {key} = {as_toml(examples[0])}" if examples else ""
+
+
+def _example(broken: _Broken) -> str:
+    examples = broken.schema.get("examples")
+    if broken.rule != "type" or not examples or not broken.path:
+        return ""
+    return f"for example: {broken.path[-1]} = {as_toml(examples[0])}"
+
+
+def as_toml(value: Any) -> str:
+    """Return a value of an example as TOML writes it.
+
+    Examples
+    --------
+    >>> print(as_toml({"value": "0.080 mL/g", "n": [1, True]}))
+    { value = "0.080 mL/g", n = [1, true] }
+    """
+    if isinstance(value, dict):
+        return "{ " + ", ".join(f"{key} = {as_toml(entry)}" for key, entry in value.items()) + " }"
+    if isinstance(value, list):
+        return "[" + ", ".join(as_toml(entry) for entry in value) + "]"
+    return json.dumps(value, ensure_ascii=False)
 
 
 _TYPES = {

@@ -415,9 +415,9 @@ def test_check_says_what_will_be_used():
     text = run_cli("check", DEMO).stdout
 
     assert "osmometry.csv: 12 rows; c [g/L], head [mm]" in text
-    assert "effect stock: concentration, u = 0.008" in text
+    assert "effect stock: concentration, u = 0.8 %" in text
     assert "liquid_density = 0.7997 g/mL" in text
-    assert "3 measurement(s) can be used." in text
+    assert "3 measurements can be used." in text
 
 
 def test_tables_are_safe_to_open_in_a_spreadsheet(tmp_path):

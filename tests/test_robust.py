@@ -58,7 +58,7 @@ ODD = {
     "falling": (OSMOTIC, heads([(1, 10), (2, 8), (3, 5)]), {0, 4}),
     "one far off": (OSMOTIC, heads([(1, 2.5), (2, 5.4), (3, 200), (4, 12)]), {0, 4}),
     "poor solvent": (OSMOTIC, heads([(1, 2.5), (2, 4.6), (4, 8), (6, 10)]), {0}),
-    "enormous mass": (OSMOTIC, heads([(1, 0.01), (2, 0.05), (3, 0.1), (4, 0.2)]), {0}),
+    "enormous mass": (OSMOTIC, heads([(1, 0.01), (2, 0.05), (3, 0.1), (4, 0.2)]), {4}),
     "grams per what": (OSMOTIC, heads([(1e9, 2.5), (2e9, 5.4)]), {3}),
     "next to nothing": (OSMOTIC, heads([(1e-9, 2.5), (2e-9, 5.4)]), {3}),
     "no viscosity": (CAPILLARY, times([(0, 100), (0.2, 100), (0.4, 100), (0.6, 100)]), {0, 4}),

@@ -85,10 +85,12 @@ class Prior:
 class FlaskFit:
     """Parameters (p,) with covariance (p, p); NaN where nothing tells the errors' scale.
 
-    ``at_bound`` tells whether the first parameter ended on its lower bound.
+    ``values`` are posterior means; ``mode`` is the curve through the readings. ``at_bound`` tells
+    whether the first parameter ended on its lower bound.
     """
 
     values: Array
+    mode: Array
     covariance: Array
     scatter: Scatter
     at_bound: bool
@@ -162,12 +164,15 @@ def fit_flasks(  # noqa: PLR0913 - a fit is its data, model, start and priors
             covariance = np.full_like(covariance, np.nan)
             break
         scale2 = scatter.scale2
+    mode = values
     if not bound and is_known:
         sd = _sd(flasks, error, u_flask, model, values) * math.sqrt(scale2)
         values, covariance = _marginalised(
             flasks, model, (values, covariance, np.abs(start)), sd, priors, fixed
         )
-    return FlaskFit(frozen_array(values), frozen_array(covariance), scatter, bound)
+    return FlaskFit(
+        frozen_array(values), frozen_array(mode), frozen_array(covariance), scatter, bound
+    )
 
 
 NO_SCATTER = "no reading error was stated and there is no scatter to learn it from"

@@ -241,6 +241,14 @@ def _findings(
     def add(code: str, severity: str, text: str, remedy: str) -> None:
         found.append(Finding(code, severity, text, remedy, series.name))
 
+    scale = {series.effects[key].target for key in series.named}
+    if not scale & {"dn_dc", "rayleigh_ratio"}:
+        add(
+            "scale-without-error",
+            "caution",
+            "dn/dc and the Rayleigh calibration are taken as exact",
+            "name effects with these targets; 1 to 2 % of dn/dc count twice in Mw",
+        )
     by_form = {a.form: a.quantities["Mw"] for a in alternatives}
     zimm, berry = by_form["Zimm plane, equal weights"], by_form["Berry plane, equal weights"]
     if zimm.value and berry.value and zimm.u and berry.u:

@@ -165,7 +165,8 @@ def _listed(constants: MarkHouwink) -> tuple[tuple[str, ...], tuple[Constant, ..
         Constant("a", constants.a, "1", constants.source, "stated"),
     ]
     if constants.calibrated_on not in {"Mn", "Mw"}:
-        return (), tuple(listed)
+        text = "Mark-Houwink constants taken as those of uniform chains"
+        return (text,) if constants.calibrated_on == "uniform" else (), tuple(listed)
     listed += [
         Constant(
             f"K, uniform chains, {family.label}",
@@ -179,7 +180,7 @@ def _listed(constants: MarkHouwink) -> tuple[tuple[str, ...], tuple[Constant, ..
     text = (
         f"constants calibrated on {constants.calibrated_on} at Đ ="
         f" {constants.calibration_dispersity:g}: the joint estimate converts them to uniform"
-        " chains; Mv here takes them as entered"
+        " chains; Mv here takes them as entered, quote the joint one"
     )
     return (text,), tuple(listed)
 

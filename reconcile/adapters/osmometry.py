@@ -383,6 +383,21 @@ def _findings(
     if a2 < -2.0 * u_a2:
         text = "A2 is negative: a poor solvent, association, or drift over the series"
         add("negative-a2", "caution", text, "change temperature or solvent; read in reverse order")
+    ratio = float(virial.values[2])
+    if abs(ratio - VIRIAL_RATIO_PRIOR[0]) > 1.5 * VIRIAL_RATIO_PRIOR[1]:
+        text = f"the third virial ratio comes out as {ratio:.2g}; 0 to 0.5 is usual"
+        add("third-virial-unusual", "caution", text, "the highest or lowest flasks bend the curve")
+    below = int((series.pi <= 0.0).sum())
+    if below:
+        text = f"{below} reading(s) at or below zero pressure"
+        add("no-pressure", "warning", text, "check zero and sign of those readings")
+    _form_finding(series, alternatives, reach, add)
+    return found
+
+
+def _form_finding(
+    series: Series, alternatives: tuple[Alternative, ...], reach: float, add: Any
+) -> None:
     n_flasks = len(np.unique(series.c))
     if n_flasks < 4:
         text = f"{n_flasks} concentrations leave little to check the extrapolation with"
@@ -403,11 +418,10 @@ def _findings(
                 text,
                 f"concentrations up to {low:.2g} g/L would settle it",
             )
-    return found
 
 
 def _readings(series: Series, virial: FlaskFit) -> dict[str, tuple[float, ...]]:
-    fitted, _, _ = _virial(series.rt)(virial.values, series.c)
+    fitted, _, _ = _virial(series.rt)(virial.mode, series.c)
     # the plot's ordinate in mol/kg, so that 1/Mn in mol/g is not lost in zeros
     ordinate = 1e3 / (series.rt * series.c)
     return {
@@ -420,7 +434,7 @@ def _readings(series: Series, virial: FlaskFit) -> dict[str, tuple[float, ...]]:
 
 
 def _fit_summary(series: Series, virial: FlaskFit) -> dict[str, Any]:
-    i, a2, g = (float(x) for x in virial.values)
+    i, a2, g = (float(x) for x in virial.mode)
     grid = np.linspace(0.0, float(series.c.max()), 41)
     curve = i + a2 * grid + g * (a2 * grid) ** 2 / i
     return {

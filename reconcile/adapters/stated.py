@@ -20,8 +20,8 @@ from reconcile.evidence import Evidence, Finding, QuantityValue, Reduction, Row,
 from reconcile.measurement import Effect, Quantity
 from reconcile.observables import (
     Observable,
+    average,
     dispersity,
-    inverse_average,
     mean_square_radius,
     viscosity_average,
 )
@@ -46,9 +46,9 @@ class _Form:
 
 
 _FORMS: Mapping[str, _Form] = {
-    "Mn": _Form("1/Mn [mol/g]", -1.0, "g/mol"),
-    "Mw": _Form("1/Mw [mol/g]", -1.0, "g/mol"),
-    "Mz": _Form("1/Mz [mol/g]", -1.0, "g/mol"),
+    "Mn": _Form("Mn [g/mol]", 1.0, "g/mol"),
+    "Mw": _Form("Mw [g/mol]", 1.0, "g/mol"),
+    "Mz": _Form("Mz [g/mol]", 1.0, "g/mol"),
     "Mv": _Form("Mv [g/mol]", 1.0, "g/mol"),
     "limiting_viscosity_number": _Form("[η] [mL/g]", 1.0, "mL/g"),
     "Rg": _Form("Rg² [cm²]", 2.0, "nm", 1e7),
@@ -58,7 +58,7 @@ _FORMS: Mapping[str, _Form] = {
 
 
 _PLAIN: Mapping[str, Observable] = {
-    **{name: inverse_average(name) for name in ("Mn", "Mw", "Mz")},
+    **{name: average(name) for name in ("Mn", "Mw", "Mz")},
     "dispersity": dispersity(),
 }
 

@@ -405,22 +405,22 @@ def _intercept_finding(alternatives: tuple[Alternative, ...], add: Any) -> None:
 
 
 def _readings(series: Series, curve: FlaskFit) -> dict[str, tuple[float, ...]]:
-    y0 = float(curve.values[0])
+    y0 = float(curve.mode[0])
     ratio = series.y / y0
     heading = {"t": "t [s]", "eta": "viscosity [Pa s]", "eta_r": "eta_r [1]"}[series.quantity]
     return {
         "c [g/dL]": tuple((1e2 * series.c).tolist()),
         heading: tuple(series.y.tolist()),
-        f"fitted {heading}": tuple(_model(curve.values, series.c)[0].tolist()),
+        f"fitted {heading}": tuple(_model(curve.mode, series.c)[0].tolist()),
         "(eta_r - 1)/c [mL/g]": tuple(((ratio - 1.0) / series.c).tolist()),
         "ln(eta_r)/c [mL/g]": tuple((np.log(ratio) / series.c).tolist()),
     }
 
 
 def _fit_summary(series: Series, curve: FlaskFit) -> dict[str, Any]:
-    y0, eta, huggins, kappa = (float(x) for x in curve.values)
+    y0, eta, huggins, kappa = (float(x) for x in curve.mode)
     grid = np.linspace(0.0, float(series.c.max()), 41)[1:]
-    ratio = _model(curve.values, grid)[0] / y0
+    ratio = _model(curve.mode, grid)[0] / y0
     return {
         "solvent": y0,
         "[η] [mL/g]": eta,

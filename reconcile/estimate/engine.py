@@ -30,6 +30,9 @@ if TYPE_CHECKING:
 __all__ = ["NodeSolution", "Predicted", "objective", "predict", "solve"]
 
 _GAUSS_NEWTON_STEPS = 2
+_RESOLVED = 3.0
+"""Least distance of some row from zero, in its own standard uncertainty over its order."""
+
 _MAX_STEPS = 40
 _CONVERGED = 1e-11
 """Newton decrement (in units of Q) below which a node is done."""
@@ -129,6 +132,13 @@ def _start(system: System, family: Family, t: Array, data: NodeData) -> Array:
         raise EstimateError(
             "no measurement yields a positive average\n"
             "  every extrapolated value is zero or negative: see the reductions"
+        )
+    resolved = np.where(usable, np.abs(values / order) / spread, 0.0).max()
+    if resolved < _RESOLVED:
+        raise EstimateError(
+            "no measurement resolves the scale of molar mass from infinity or zero\n"
+            f"  the best lies {resolved:.1f} standard uncertainties off, expected {_RESOLVED:g}:"
+            " see the limits in `reconcile reduce`"
         )
     safe = np.where(usable, order, 1.0)
     ln_ratio = np.log(np.where(usable, values, 1.0)) - np.log(at_zero.value)

@@ -6,7 +6,8 @@ likelihood makes the headline, the single-family intervals stand beneath it.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+import math
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -221,7 +222,12 @@ def _assemble(
         families,
         {name: grid.nodes for name, grid in grids.items()},
         headline,
-        {t.name: _profile(t, list(grids.values()), fine, dof[t.name], system) for t in targets},
+        {
+            t.name: _between(
+                _profile(t, list(grids.values()), fine, dof[t.name], system), t.name, families
+            )
+            for t in targets
+        },
         fine,
         frozen_array(2.0 * (averaged.max() - averaged)),
         float(averaged[0] - averaged.max()),
@@ -351,6 +357,18 @@ def _profile(
     )
 
 
+def _between(statement: Statement, name: str, families: dict[str, FamilyFit]) -> Statement:
+    """Return the statement with its point between those of the families, by their weights.
+
+    The highest point of the averaged profile jumps from one family to the other where they differ.
+    """
+    points = [(fit.weight, fit.averages[name].value) for fit in families.values()]
+    if statement.value is None or any(value is None for _, value in points):
+        return statement
+    mean = sum(weight * math.log(value) for weight, value in points if value is not None)
+    return replace(statement, value=math.exp(mean))
+
+
 def _exp(x: float | None) -> float | None:
     """Return exp(x); None for no end, and for one beyond any molar mass."""
     return None if x is None or x > _LARGEST else float(np.exp(x))
@@ -370,8 +388,6 @@ def _conditional(
 
 def _with_expected_limit(result: JointEstimate) -> JointEstimate:
     """Add the limit that readings in exact agreement with the estimate would have given."""
-    from dataclasses import replace  # noqa: PLC0415 - only where a limit is reported
-
     fit = result.best
     t, z = np.array([fit.t_mode]), fit.z_mode[None].copy()
     z[:, 1:] = 0.0

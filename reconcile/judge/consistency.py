@@ -18,6 +18,9 @@ if TYPE_CHECKING:
 
 __all__ = ["Consistency", "Residual", "assess"]
 
+_TINY = 1e-12
+"""Below this a p-value is a statement about the tail of a law nobody has seen."""
+
 _NOTICEABLE = 1.0
 """χ² without degrees of freedom from which a misfit at the edge of the families is mentioned."""
 
@@ -89,16 +92,22 @@ def _statement(verdict: str, p_value: float | None, chi2: float, free: FamilyFre
     if not free.possible:
         return (
             "No molar-mass distribution of any shape has these averages"
-            f" (p = {free.p_value:.1g}); which measurement is wrong is not named yet."
+            f" (p {_p_text(free.p_value or 0.0)}); which measurement is wrong is not named yet."
         )
     if p_value is None:
         text = "There are no more measurements than unknowns: whether they agree cannot be tested."
         if chi2 > _NOTICEABLE:
             text += f" Yet neither family meets them all (χ² = {chi2:.2g})."
         return text
-    p = f"{p_value:.1g}" if p_value < 0.1 else f"{p_value:.2f}"
+    p = _p_text(p_value)
     if verdict == "consistent":
-        return f"The measurements tell one story (p = {p})."
+        return f"The measurements tell one story (p {p})."
     if verdict == "doubtful":
-        return f"The measurements agree poorly (p = {p}); no culprit is named yet."
-    return f"The measurements contradict each other (p = {p}); no culprit is named yet."
+        return f"The measurements agree poorly (p {p}); no culprit is named yet."
+    return f"The measurements contradict each other (p {p}); no culprit is named yet."
+
+
+def _p_text(p_value: float) -> str:
+    if p_value < _TINY:
+        return f"< {_TINY:g}"
+    return f"= {p_value:.1g}" if p_value < 0.1 else f"= {p_value:.2f}"

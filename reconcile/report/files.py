@@ -160,10 +160,25 @@ def _quantities_csv(document: Mapping[str, Any]) -> str:
                         q["u"],
                         q["u_with_effects"],
                         *q["interval95"],
-                        q["reading"],
+                        q["reading"] if q["u"] is not None or q["reading"] != "interval" else "",
                     ]
                 )
+    for form, averages in _joint(document):
+        rows += [
+            ["joint estimate", "", form, name, a["unit"], a["value"], None, None,
+             *a["interval95"], a["reading"]]
+            for name, a in averages.items()
+        ]  # fmt: skip
     return _csv(rows)
+
+
+def _joint(document: Mapping[str, Any]) -> list[tuple[str, Any]]:
+    """Return the averages of the joint estimate and of each family alone, if there are any."""
+    estimate = document["estimate"]
+    if estimate is None:
+        return []
+    own = [(f"{name} alone", fit["averages"]) for name, fit in estimate["families"].items()]
+    return [("families averaged", estimate["averages"]), *own]
 
 
 def _curves_csv(document: Mapping[str, Any]) -> str:

@@ -159,6 +159,7 @@ def _answer(page: _Page, document: Mapping[str, Any]) -> None:
         for entry in estimate["viscosity_averages"]
     ]
     _compact(page, rows)
+    page.line(_families_of_mz(estimate), 2, 4)
     limit = estimate["averages"]["dispersity"]["expected_limit95"]
     if limit is not None:
         reading = estimate["averages"]["dispersity"]["reading"]
@@ -167,10 +168,20 @@ def _answer(page: _Page, document: Mapping[str, Any]) -> None:
     page.line()
     consistency = document["consistency"]
     page.line(f"Verdict: {consistency['verdict']}. {consistency['statement']}", 2, 2)
+    if consistency["verdict"] == "contradiction":
+        page.line("While they contradict each other, no interval above holds.", 2)
     for entry in document["limits"]:
         page.line(_limit_sentence(entry), 2, 4)
     if document["limits"]:
         page.line("Release decisions belong to qualified people under local rules.", 2)
+
+
+def _families_of_mz(estimate: Mapping[str, Any]) -> str:
+    parts = [
+        f"{_FAMILY_LABELS[name]} {_mass_interval(fit['averages']['Mz'])}"
+        for name, fit in sorted(estimate["families"].items(), reverse=True)
+    ]
+    return f"Mz rests on the family: {', '.join(parts)} (95 %)."
 
 
 def _compact(page: _Page, rows: list[tuple[str, str, str]]) -> None:
@@ -214,6 +225,10 @@ def _mass_interval(entry: Mapping[str, Any]) -> str:
     return f"{interval_text(*ends)} {unit}".strip()
 
 
+def _count(n: int, noun: str) -> str:
+    return f"{n} {noun}" if n == 1 else f"{n} {noun}s"
+
+
 def _limit_sentence(entry: Mapping[str, Any]) -> str:
     low, high = entry["limit"]
     unit = "" if entry["quantity"] == "dispersity" else "g/mol"
@@ -222,12 +237,14 @@ def _limit_sentence(entry: Mapping[str, Any]) -> str:
         None if low is None else low * factor, None if high is None else high * factor
     )
     probability = entry["probability_met"]
+    name = _NAMES.get(entry["quantity"], entry["quantity"])
+    if probability is None:
+        return f"Limit {name} {text} {unit}".rstrip() + ": these data do not decide it."
     shown = (
         f"{probability:.2f}"
         if 0.005 < probability < 0.995
         else ("> 0.99" if probability >= 0.995 else "< 0.01")
     )
-    name = _NAMES.get(entry["quantity"], entry["quantity"])
     return (
         f"Limit {name} {text} {unit}".rstrip()
         + f": probability that the true value meets it {shown}."
@@ -239,20 +256,24 @@ def _agreement(page: _Page, document: Mapping[str, Any]) -> None:
     consistency = document["consistency"]
     rows = []
     for entry in consistency["residuals"]:
-        z = "not testable" if entry["z"] is None else f"z = {entry['z']:+.1f}"
+        z = "no freedom" if entry["z"] is None else f"z = {round(entry['z'], 1) + 0.0:+.1f}"
         rows.append((_NAMES.get(entry["quantity"], entry["quantity"]), z, entry["measurement"]))
     page.table(rows)
     if consistency["p_value"] is not None:
         page.line(
-            f"χ² = {consistency['chi2']:.2f} for {consistency['dof']} degree(s) of freedom,"
-            f" p = {consistency['p_value']:.2g}",
+            f"χ² = {consistency['chi2']:.2f} for {_count(consistency['dof'], 'degree')} of freedom",
             2,
         )
     free = document["family_free"]
     bound = free["dispersity"]
-    if bound["lower"] is not None:
+    if bound["lower"] is not None and free["possible"]:
         text = interval_text(bound["lower"], bound["upper"])
         page.line(f"Whatever the distribution's shape, Đ {text} (95 %, from averages alone).", 2)
+    sources = [e["measurement"] for e in consistency["residuals"] if e["quantity"] == "Mn"]
+    if len(sources) == 1:
+        page.line(
+            f"A fault in {sources[0]}, the only Mn, would change Đ and show in nothing here.", 2
+        )
     page.line(
         "Not assessed yet: which fault would explain a disagreement, and which faults these data"
         " could not show.",
@@ -303,8 +324,12 @@ def _quantity_row(name: str, entry: Mapping[str, Any]) -> tuple[str, str, str]:
     factor, unit = scaled_unit(entry["unit"], entry["value"])
     low, high = (None if end is None else end * factor for end in entry["interval95"])
     label = _NAMES.get(name, name)
-    if entry["value"] is None or entry["reading"] in {"upper limit", "undetermined"}:
-        return label, f"{interval_text(low, high)} {unit}".strip(), entry["why"]
+    if entry["reading"] != "interval":
+        factor, unit = scaled_unit(entry["unit"], _size(entry))
+        low, high = (None if end is None else end * factor for end in entry["interval95"])
+        return label, f"{interval_text(low, high)} {unit}".strip(), entry["why"] or "(95 %)"
+    if entry["value"] is None:
+        return label, "–", entry["why"]
     value = entry["value"] * factor
     if entry["u"] is None:
         why = entry["why"] or _NO_UNCERTAINTY
@@ -352,8 +377,7 @@ def _beneath(page: _Page, document: Mapping[str, Any], *, verbose: bool) -> None
         d = fit["averages"]["dispersity"]
         page.line(
             f"{_FAMILY_LABELS[name]}: Đ {interval_text(*d['interval95'])} (95 %),"
-            f" Mz {_mass_interval(fit['averages']['Mz'])}, weight {fit['weight']:.2f},"
-            f" χ² {fit['chi2']:.2f}",
+            f" weight {fit['weight']:.2f}, χ² {fit['chi2']:.2f}",
             2,
             4,
         )
@@ -389,5 +413,5 @@ def check_report(summary: Sequence[Mapping[str, Any]], head: str, *, width: int 
         for line in entry["lines"]:
             page.line(line, 2, 4)
     page.line()
-    page.line(f"{len(summary)} measurement(s) can be used.")
+    page.line(f"{_count(len(summary), 'measurement')} can be used.")
     return page.text()
