@@ -45,6 +45,7 @@ _PLAUSIBLE = {
     "length": (1e-9, 1e6),
     "second_virial": (0.0, 1e3),
 }
+_LARGEST_INTEGER = 10**15
 _SHARED_KEYS = {"name", "date", "solvent", "temperature", "effects", "readings", "note"}
 
 
@@ -106,7 +107,8 @@ def load_case(
                 )
                 _check_effects(entry, place, document, effects, problems)
                 measurements.append(measurement)
-    _check_names(measurements, document, problems)
+    _check_names(measurements, problems)
+    problems.extend(_limits_reversed(data.get("limits"), document))
     if not measurements and not problems:
         problems.append(
             document.problem(
@@ -168,6 +170,9 @@ def _read_toml(path: Path, shown: str) -> _Document:
         raise InputError([_toml_problem(shown, text, str(error))]) from None
     except RecursionError:
         raise InputError([Problem(shown, 0, "", "is nested too deeply")]) from None
+    except ValueError:
+        # what Python itself refuses to read as an integer
+        raise InputError([Problem(shown, 0, "", "holds a number of too many digits")]) from None
     if _depth(data) > _MAX_DEPTH:
         raise InputError([Problem(shown, 0, "", "is nested too deeply")])
     return _Document(shown, _dates_as_text(data), line_map(text), hashlib.sha256(raw).hexdigest())
@@ -181,6 +186,9 @@ def _not_finite(document: _Document) -> list[Problem]:
         path, entry = stack.pop()
         if isinstance(entry, float) and not math.isfinite(entry):
             found.append(document.problem(path, f"found {entry}, expected a number"))
+        elif isinstance(entry, int) and abs(entry) > _LARGEST_INTEGER:
+            text = f"found a number of {len(str(abs(entry)))} digits, expected a smaller one"
+            found.append(document.problem(path, text))
         elif isinstance(entry, dict):
             stack.extend(((*path, key), child) for key, child in entry.items())
         elif isinstance(entry, list):
@@ -416,9 +424,7 @@ def _check_effects(
         )
 
 
-def _check_names(
-    measurements: list[Measurement], document: _Document, problems: list[Problem]
-) -> None:
+def _check_names(measurements: list[Measurement], problems: list[Problem]) -> None:
     seen: dict[str, Measurement] = {}
     for measurement in measurements:
         if measurement.name in seen:
@@ -431,7 +437,19 @@ def _check_names(
                 )
             )
         seen[measurement.name] = measurement
-    del document
+
+
+def _limits_reversed(limits: Any, document: _Document) -> list[Problem]:
+    """Return a problem for every limit whose lower end is not below its upper one."""
+    found = []
+    for name, limit in limits.items() if isinstance(limits, dict) else ():
+        pair = [limit.get("min"), limit.get("max")] if isinstance(limit, dict) else limit
+        ends = [getattr(end, "value", end) for end in pair] if isinstance(pair, list) else []
+        numbers = [end for end in ends if isinstance(end, (int, float))]
+        if len(numbers) == 2 and numbers[0] >= numbers[1]:
+            text = "the lowest is not below the highest"
+            found.append(document.problem(("limits", name), text, "exchange them"))
+    return found
 
 
 def _sample(entry: Mapping[str, Any]) -> Sample:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import re
 from dataclasses import dataclass
 from difflib import get_close_matches
 from functools import cache
@@ -42,7 +43,12 @@ def path_text(path: tuple[str | int, ...]) -> str:
     """
     text = ""
     for part in path:
-        text += f"[{part}]" if isinstance(part, int) else f".{part}" if text else str(part)
+        if isinstance(part, int):
+            text += f"[{part}]"
+        else:
+            # a quoted key may hold anything, line breaks too
+            key = part if part.isprintable() else json.dumps(part)
+            text += f".{key}" if text else key
     return text
 
 
@@ -64,10 +70,17 @@ def load_schema(name: str) -> dict[str, Any]:
 
 def validate(document: Any, name: str) -> Iterator[SchemaFault]:
     """Yield every place where a document breaks its schema, as plain sentences."""
-    from jsonschema import Draft202012Validator  # noqa: PLC0415 - slow to import
+    from jsonschema import Draft202012Validator, FormatChecker  # noqa: PLC0415 - slow to import
 
-    for error in Draft202012Validator(load_schema(name)).iter_errors(document):
-        yield from _explain(error)
+    validator = Draft202012Validator(load_schema(name), format_checker=FormatChecker(["date"]))
+    # a date of the wrong form breaks its pattern and its format; one sentence will do
+    seen: set[tuple[Any, ...]] = set()
+    for error in validator.iter_errors(document):
+        place = tuple(error.absolute_path)
+        if error.validator not in {"pattern", "format"} or place not in seen:
+            yield from _explain(error)
+        if error.validator in {"pattern", "format"}:
+            seen.add(place)
 
 
 @dataclass(frozen=True, slots=True)
@@ -106,7 +119,7 @@ def _unknown(error: _Broken) -> Iterator[SchemaFault]:
     known = list(error.schema.get("properties", {}))
     patterns = error.schema.get("patternProperties", {})
     for key in error.instance:
-        if key in known:
+        if key in known or any(re.search(pattern, key) for pattern in patterns):
             continue
         near = get_close_matches(key, known, 1, 0.6)
         remedy = f"did you mean {near[0]!r}?" if near else f"known: {', '.join(sorted(known)[:12])}"
@@ -169,6 +182,7 @@ def _sentence(error: _Broken) -> str:
         "minItems": f"found {found}, expected at least {value} entries",
         "maxItems": f"found {found}, expected at most {value} entries",
         "uniqueItems": f"found {found}, expected each entry once",
+        "format": f"found {found}, expected {error.schema.get('x-expected', value)}",
         "pattern": f"found {found}, expected {error.schema.get('x-expected', value)}",
         "minProperties": "is empty",
     }

@@ -9,6 +9,7 @@ from __future__ import annotations
 import csv
 import hashlib
 import io
+import math
 import re
 from dataclasses import dataclass
 from difflib import get_close_matches
@@ -31,6 +32,8 @@ __all__ = ["MAX_BYTES", "MAX_ROWS", "read_bytes", "read_table"]
 MAX_BYTES = 20_000_000
 MAX_ROWS = 200_000
 _MAX_SHOWN = 8
+# the patterns below take a time that grows with the square of a heading's length
+_LONGEST_HEADING = 200
 
 _BRACKET = re.compile(r"^\s*(.+?)\s*\[([^\[\]]*)\]\s*$")
 _SLASH = re.compile(r"^\s*(.+?)\s*/\s*(?:\((.+)\)|(\S.*))\s*$")
@@ -131,7 +134,7 @@ def _lines(text: str, shown: str) -> list[_Line]:
     kept = [
         (number, line)
         for number, line in enumerate(text.splitlines(), start=1)
-        if line.strip() and not line.lstrip().startswith("#")
+        if line.strip(" \t;,") and not line.lstrip().startswith("#")
     ]
     if not kept:
         raise InputError([Problem(shown, 0, "", "is empty", "expected headings and readings")])
@@ -139,9 +142,12 @@ def _lines(text: str, shown: str) -> list[_Line]:
         found = f"has {len(kept)} rows, expected at most {MAX_ROWS}"
         raise InputError([Problem(shown, 0, "", found, "average the scans first")])
     head = kept[0][1]
-    # headings may hold commas of their own only in brackets, so the head decides the separator
-    separator = next((s for s in ("\t", ";") if s in head), ",")
-    result = []
+    # a tie, as in "c, g/L;t, s" over decimal commas, goes to the mark that stands first here
+    separator = max(
+        [mark for mark in "\t;," if mark in head] or [","],
+        key=lambda mark: sum(line.count(mark) == head.count(mark) for _, line in kept),
+    )
+    result: list[_Line] = []
     for number, line in kept:
         try:
             cells = next(csv.reader(io.StringIO(line), delimiter=separator, strict=True))
@@ -149,12 +155,22 @@ def _lines(text: str, shown: str) -> list[_Line]:
             raise InputError([Problem(shown, number, "", "has an unfinished quote")]) from None
         while len(cells) > 1 and not cells[-1].strip():
             cells.pop()
+        if result:
+            cells += [""] * _n_blank_notes(result[0].cells, len(cells))
         result.append(_Line(number, tuple(cell.strip() for cell in cells)))
     return result
 
 
+def _n_blank_notes(head: Sequence[str], n_cells: int) -> int:
+    """Return how many cells a row lacks, if only notes stand in those columns; else 0."""
+    missing = head[n_cells:]
+    return len(missing) if all(_IGNORED.match(heading) for heading in missing) else 0
+
+
 def _split_heading(text: str) -> tuple[str, str]:
     """Return name and unit of a heading: ``c [g/L]``, ``c (g/L)``, ``c / g L-1``, ``c, g/L``."""
+    if len(text) > _LONGEST_HEADING:
+        return text.strip(), ""
     match = _BRACKET.match(text)
     if match is not None:
         return match[1], match[2].strip()
@@ -230,14 +246,21 @@ def _values(
         for line in body:
             cell = line.cells[position]
             try:
-                numbers.append(parse_number(cell.replace(",", ".") if comma else cell))
+                numbers.append(_number(cell.replace(",", ".") if comma else cell, factor))
             except UnitError as error:
                 text = "is blank, expected a number" if not cell else f"{error}, expected a number"
                 problems.append(Problem(shown, line.number, f"column {key!r}", text))
-        array = np.array(numbers) * factor
+        array = np.array(numbers, dtype=float)
         array.setflags(write=False)
         columns[key] = array
     return columns
+
+
+def _number(cell: str, factor: float) -> float:
+    number = parse_number(cell) * factor
+    if not math.isfinite(number):
+        raise UnitError(f'"{cell}" is too large')
+    return number
 
 
 def _has_decimal_comma(
@@ -246,7 +269,8 @@ def _has_decimal_comma(
     """Return whether the file writes decimals with a comma; refuse a file that does both."""
     cells = [(line.number, line.cells[entry[3]]) for line in body for entry in heads]
     commas = [place for place in cells if "," in place[1]]
-    points = [place for place in cells if "." in place[1]]
+    # a cell such as "n.d." is no number, and told so later
+    points = [place for place in cells if "." in place[1] and any(c.isdigit() for c in place[1])]
     if commas and points:
         number = max(commas[0][0], points[0][0])
         found = f"found {commas[0][1]!r} and {points[0][1]!r}: decimal comma and decimal point"

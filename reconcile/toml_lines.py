@@ -8,6 +8,7 @@ table or an array gets the line on which its statement starts.
 from __future__ import annotations
 
 import re
+import tomllib
 
 __all__ = ["KeyPath", "line_map", "line_of"]
 
@@ -17,7 +18,6 @@ _BARE = r"""(?:"(?:[^"\\]|\\.)*"|'[^']*'|[A-Za-z0-9_-]+)"""
 _DOTTED = rf"{_BARE}(?:\s*\.\s*{_BARE})*"
 _HEADER = re.compile(rf"\s*(\[\[?)\s*({_DOTTED})\s*\]")
 _STATEMENT = re.compile(rf"\s*({_DOTTED})\s*=")
-_PART = re.compile(r"""["']([^"']*)["']|([A-Za-z0-9_-]+)""")
 _QUOTED = re.compile(
     r'"""(?:[^\\]|\\.)*?"""|\'\'\'.*?\'\'\'|"(?:[^"\\\n]|\\.)*"|\'[^\'\n]*\'|#[^\n]*', re.DOTALL
 )
@@ -60,14 +60,24 @@ def line_map(text: str) -> dict[KeyPath, int]:
 def _inside_strings(text: str) -> set[int]:
     """Return the lines that start inside a string of several lines."""
     inside: set[int] = set()
+    line, seen = 1, 0
     for match in _QUOTED.finditer(text):
-        first = text.count("\n", 0, match.start()) + 1
-        inside.update(range(first + 1, first + 1 + match[0].count("\n")))
+        breaks = match[0].count("\n")
+        if breaks:
+            line, seen = line + text.count("\n", seen, match.start()), match.start()
+            inside.update(range(line + 1, line + 1 + breaks))
     return inside
 
 
 def _parts(dotted: str) -> KeyPath:
-    return tuple(quoted or bare for quoted, bare in _PART.findall(dotted))
+    if '"' not in dotted and "'" not in dotted:
+        return tuple(part.strip() for part in dotted.split("."))
+    # quoted keys have escapes of their own, which the standard reader knows best
+    value, parts = tomllib.loads(f"{dotted} = 0"), []
+    while isinstance(value, dict):
+        (part, value), *_ = value.items()
+        parts.append(part)
+    return tuple(parts)
 
 
 def _enter(bracket: str, parts: KeyPath, count: dict[KeyPath, int]) -> KeyPath:
