@@ -210,7 +210,7 @@ def scatter_finding(
         return ()
     text = (
         f"readings scatter {math.sqrt(scatter.ratio):.2g} times as much as stated"
-        f" (p = {scatter.p_value:.1g})"
+        f" (p {'< 1e-12' if scatter.p_value < 1e-12 else f'= {scatter.p_value:.1g}'})"
     )
     return (Finding("scatter-exceeds-stated", "warning", text, look_for, name),)
 

@@ -270,7 +270,7 @@ def _agreement(page: _Page, document: Mapping[str, Any]) -> None:
         text = interval_text(bound["lower"], bound["upper"])
         page.line(f"Whatever the distribution's shape, Đ {text} (95 %, from averages alone).", 2)
     sources = [e["measurement"] for e in consistency["residuals"] if e["quantity"] == "Mn"]
-    if len(sources) == 1:
+    if len(sources) == 1 and len(consistency["residuals"]) > 1:
         page.line(
             f"A fault in {sources[0]}, the only Mn, would change Đ and show in nothing here.", 2
         )
@@ -351,7 +351,8 @@ def _inline(quantities: Mapping[str, Any]) -> str:
         factor, unit = scaled_unit(entry["unit"], entry["value"])
         u = None if entry["u"] is None else entry["u"] * factor
         value = None if entry["value"] is None else entry["value"] * factor
-        parts.append(f"{_NAMES.get(name, name)} {value_text(value, u)} {unit}".strip())
+        shown = f"{value_text(value, u)} {unit}".strip() if value is not None else "not resolved"
+        parts.append(f"{_NAMES.get(name, name)} {shown}")
     return "; ".join(parts)
 
 
@@ -381,7 +382,7 @@ def _beneath(page: _Page, document: Mapping[str, Any], *, verbose: bool) -> None
             2,
             4,
         )
-    if verbose:
+    if verbose and estimate["budget"]:
         page.line("Share of the variance of ln Đ:", 2)
         ranked = sorted(estimate["budget"], key=lambda e: -e["share"])
         page.table(
