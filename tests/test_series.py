@@ -175,7 +175,7 @@ def test_flask_error_moves_reading_and_abscissa_together():
     c = np.array([1.0, 2.0, 3.0, 4.0, 5.0, 6.0]) * 1e-3
     mn, a2, u_c = 1.3e5, 4e-4, 0.01
     fits = []
-    for _ in range(300):
+    for _ in range(100):
         true = c * np.exp(rng.normal(0.0, u_c, len(c)))
         pi = RT * (true / mn + a2 * true**2 + 0.25 * a2**2 * mn * true**3)
         result = reduced_osmotic(
@@ -187,8 +187,9 @@ def test_flask_error_moves_reading_and_abscissa_together():
         fits.append(result.quantities["Mn"])
 
     spread = np.std([q.value for q in fits])
-    # the prior on g adds what a fixed g = 0.25 in the drawn sets does not show
-    assert spread <= np.mean([q.u for q in fits]) <= 1.4 * spread
+    # the spread of 100 fits is known to 7 %, three times that is 0.21; the prior on g adds what a
+    # fixed g = 0.25 in the drawn sets does not show
+    assert 0.79 * spread <= np.mean([q.u for q in fits]) <= 1.4 * 1.21 * spread
 
 
 def test_evidence_is_on_the_scale_of_the_readings_and_moves_with_the_stock():
