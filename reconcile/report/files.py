@@ -35,9 +35,9 @@ def write_text(path: Path, text: str) -> None:
         os.umask(umask)
         Path(temporary).chmod(0o666 & ~umask)
         Path(temporary).replace(path)
-    except BaseException:
+    finally:
+        # gone already where it took its place; left behind by whatever stopped us before that
         Path(temporary).unlink(missing_ok=True)
-        raise
 
 
 def write_all(document: Mapping[str, Any], out: Path, inputs: Iterable[Path] = ()) -> None:
