@@ -125,8 +125,9 @@ _SUPERSCRIPT = str.maketrans("⁰¹²³⁴⁵⁶⁷⁸⁹⁻", "0123456789-")
 _HUNDRED = re.compile(r"/\s*\(?\s*100\s*(?:mL|ml|cm\^?3)\s*\)?(?!\w)")
 _BRACKETS = re.compile(r"/\s*\(([^()/]+)\)")
 _FACTOR = re.compile(
-    r"(?P<op>\s*[*·⋅×/]\s*|\s+|)"
-    r"(?P<symbol>cmH2O|mmH2O|1|[A-Za-zÅ°%]+)(?:\^|\*\*)?(?P<power>-?[1-6])?(?![A-Za-z0-9])"
+    r"(?P<op>\s*[*·⋅×/.]\s*|\s+|)"
+    r"(?P<symbol>cmH2O|mmH2O|1|[A-Za-zÅ°%]+)"
+    r"(?:(?:\^|\*\*)?(?P<power>-?[1-6]))?(?![A-Za-z0-9^])(?!\*\*)"
 )
 
 
@@ -156,6 +157,8 @@ def parse_number(text: str) -> float:
 
 def _canonical(text: str) -> str:
     text = re.sub("[⁰¹²³⁴⁵⁶⁷⁸⁹⁻]+", lambda m: "^" + m[0].translate(_SUPERSCRIPT), text.strip())
+    text = text.replace("₂", "2").replace("\u212b", "Å")
+    text = re.sub(r"\b(mm Hg|[cm]m H2O)\b", lambda m: m[0].replace(" ", ""), text)
     return text.replace("µ", "u").replace("μ", "u").replace("−", "-").replace("℃", "°C")
 
 

@@ -39,6 +39,12 @@ SPELLINGS = [
     ("torr", "pressure", "torr"),
     ("Torr", "pressure", "torr"),
     ("mmHg", "pressure", "mmHg"),
+    ("mm Hg", "pressure", "mmHg"),
+    ("cm H2O", "pressure", "cmH2O"),
+    ("cmH₂O", "pressure", "cmH2O"),
+    ("\u212b", "length", "angstrom"),
+    ("g.L-1", "concentration", "g/L"),
+    ("mPa.s", "viscosity", "mPa*s"),
     ("cmH2O", "pressure", "cmH2O"),
     ("psi", "pressure", "psi"),
     ("gf/cm2", "pressure", "gram_force/cm^2"),
@@ -120,6 +126,9 @@ def test_conversions_of_common_practice():
         ("nan m", ["length"], "does not start with a number"),
         ("9**9**9 m", ["length"], "is not a unit"),
         ("90 deg", ["ratio"], "is an angle"),
+        ("1 m^", ["length"], "is not a unit"),
+        ("1 m**", ["length"], "is not a unit"),
+        ("1 g./L", ["concentration"], "is not a unit"),
     ],
 )
 def test_what_is_refused_and_why(text, kinds, message):
