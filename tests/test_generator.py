@@ -318,6 +318,7 @@ def as_list(oracle):
     return [oracle.ln_Mn, oracle.ln_Mw, oracle.ln_dispersity]
 
 
+@pytest.mark.slow
 def test_oracle_is_the_only_estimator_where_two_flasks_settle_two_unknowns():
     bench = Bench(
         Solution(A2_osmometry=3e-4, A2_scattering=3e-4, g=0.0, K_s=0.0),
@@ -336,6 +337,7 @@ def test_oracle_is_the_only_estimator_where_two_flasks_settle_two_unknowns():
     assert spread(rows) == pytest.approx(expected, rel=0.04)
 
 
+@pytest.mark.slow
 def test_oracle_of_osmometry_and_viscometry_against_the_closed_solution():
     bench = Bench(
         replace(IDEAL, g=0.0),
